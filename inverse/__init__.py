@@ -1,0 +1,1 @@
+"""From behaviour to parts: assemblies of coupled oscillators that do what was asked."""

@@ -1,0 +1,1 @@
+"""Bodies and links, each nothing but its table of terms."""

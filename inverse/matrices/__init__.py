@@ -1,0 +1,1 @@
+"""From a point in the space of dimensions to the rest position and the matrices there."""

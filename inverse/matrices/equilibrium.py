@@ -1,0 +1,149 @@
+"""The rest position: dependent dimensions from base ones, and the way back for derivatives.
+
+Symbols: ``z`` base dimensions and ``y`` dependent ones in local coordinates, ``G(z, y) = 0`` their equations, so
+``∂y/∂z = −G_y⁻¹ G_z`` (implicit function theorem).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.sparse as sp
+import scipy.sparse.linalg as spla
+
+from inverse.assembly.assembly import Model
+from inverse.assembly.terms import Array, Monomials, Point
+
+NEWTON_STEPS = 40
+NEWTON_TOLERANCE = 1e-14
+DENSE_DEPENDENTS = 64
+"""Up to this many dependent dimensions a batch is solved dense and together, beyond it build by build, sparse."""
+
+
+def at_rest(model: Model, base: Array) -> Point:
+    """All dimensions of a batch of builds, the dependent ones found by Newton's method.
+
+    Parameters
+    ----------
+    model : Model
+    base : ndarray, shape (B, D)
+        Base dimensions, SI.
+
+    Returns
+    -------
+    Point
+        Shape (B, D + dependents); NaN for a build that has no rest position.
+    """
+    dependents = model.dependents
+    free = np.ones((len(base), len(dependents)))
+    point = Point(np.hstack([base, free]), model.positive)
+    if not len(dependents):
+        return point
+    first = base.shape[1]
+    # Seeds name at most one level of earlier seeds (directions need lengths), so twice is enough.
+    for _ in range(2):
+        seeds = dependents.seeds.values(dependents.table.values(point))
+        with np.errstate(invalid="ignore"):
+            point = _with(point, first, seeds**dependents.seed_power)
+    return _newton(model, point, first)
+
+
+def _with(point: Point, first: int, dependent: Array) -> Point:
+    values = point.values.copy()
+    values[:, first:] = dependent
+    return Point(values, point.positive)
+
+
+def _newton(model: Model, point: Point, first: int) -> Point:
+    dependents, positive = model.dependents, model.positive[first:]
+    for _ in range(NEWTON_STEPS):
+        y = point.values[:, first:]
+        residual = dependents.vanishing.values(dependents.table.values(point))
+        step = -RestSlopes(model, point).solve(residual[:, None, :])[:, 0]
+        with np.errstate(over="ignore", invalid="ignore"):
+            new = np.where(positive, y * np.exp(np.clip(step, -1, 1)), y + step)
+        point = _with(point, first, new)
+        scale = np.where(positive, 1.0, np.abs(new)) + np.finfo(float).tiny
+        settled = np.abs(step) <= NEWTON_TOLERANCE * np.maximum(scale, np.max(np.abs(new), axis=1, keepdims=True) * 1e-3)
+        if np.all(settled | ~np.isfinite(step)):
+            return point
+    lost = ~np.all(settled, axis=1)
+    point.values[lost, first:] = np.nan
+    return point
+
+
+@dataclass(frozen=True)
+class RestSlopes:
+    """``G_z`` and ``G_y`` at a batch of points, ready to solve with."""
+
+    model: Model
+    point: Point
+
+    def _by_dimension(self) -> Array:
+        """``∂G/∂(z, y)``, shape (B, S, D + S); the batch is small or the model is."""
+        dependents = self.model.dependents
+        picks = np.zeros((1, dependents.vanishing.size, len(dependents.table)))
+        np.add.at(picks[0], (dependents.vanishing.place, dependents.vanishing.term), 1.0)
+        a = dependents.table.values(self.point)
+        return dependents.table.pull(self.point, a, np.broadcast_to(picks, (len(a), *picks.shape[1:])))
+
+    def _single(self, build: int) -> sp.csr_array:
+        """``∂G/∂(z, y)`` of one build, sparse."""
+        dependents = self.model.dependents
+        point = Point(self.point.values[[build]], self.point.positive)
+        slopes = dependents.table.jacobian(point, dependents.table.values(point))
+        vanishing = dependents.vanishing
+        ones = np.ones(len(vanishing.term))
+        picks = sp.csr_array((ones, (vanishing.place, vanishing.term)), shape=(vanishing.size, slopes.shape[0]))
+        return sp.csr_array(picks @ slopes)
+
+    def solve(self, right: Array) -> Array:
+        """``G_y⁻¹ right`` for rows ``right`` (B, k, S)."""
+        first = len(self.point.positive) - len(self.model.dependents)
+        if len(self.model.dependents) <= DENSE_DEPENDENTS:
+            G_y = self._by_dimension()[:, :, first:]
+            return np.swapaxes(_dense_solve(G_y, np.swapaxes(right, 1, 2)), 1, 2)
+        return np.stack([_sparse_solver(self._single(b)[:, first:])(right[b].T).T for b in range(len(right))])
+
+    def pull(self, cotangent: Array) -> Array:
+        """Derivatives over all dimensions, (B, k, D + S), to those over the base ones, (B, k, D)."""
+        if not len(self.model.dependents):
+            return cotangent
+        first = len(self.point.positive) - len(self.model.dependents)
+        base, dependent = cotangent[:, :, :first], cotangent[:, :, first:]
+        if len(self.model.dependents) <= DENSE_DEPENDENTS:
+            slopes = self._by_dimension()
+            adjoint = _dense_solve(np.swapaxes(slopes[:, :, first:], 1, 2), np.swapaxes(dependent, 1, 2))
+            return np.asarray(base - np.swapaxes(adjoint, 1, 2) @ slopes[:, :, :first])
+        out = np.empty_like(base)
+        for b in range(len(base)):
+            slopes_b = self._single(b)
+            adjoint_b = _sparse_solver(slopes_b[:, first:].T)(dependent[b].T)
+            out[b] = base[b] - adjoint_b.T @ slopes_b[:, :first]
+        return out
+
+
+def _dense_solve(matrices: Array, right: Array) -> Array:
+    """Batched solve that gives NaN for a singular matrix instead of raising for all."""
+    try:
+        return np.asarray(np.linalg.solve(matrices, right))
+    except np.linalg.LinAlgError:
+        return np.stack([_one_solve(m, r) for m, r in zip(matrices, right, strict=True)])
+
+
+def _one_solve(matrix: Array, right: Array) -> Array:
+    try:
+        return np.asarray(np.linalg.solve(matrix, right))
+    except np.linalg.LinAlgError:
+        return np.full_like(right, np.nan)
+
+
+def _sparse_solver(matrix: sp.csr_array) -> Callable[[Array], Array]:
+    """Solver of one sparse system, NaN where it is singular."""
+    try:
+        solve: Callable[[Array], Array] = spla.splu(sp.csc_array(matrix)).solve
+    except RuntimeError:
+        return lambda right: np.full_like(right, np.nan)
+    return solve

@@ -1,0 +1,97 @@
+"""Rows, weights and matrices of a batch of builds.
+
+Symbols: ``w`` weights (B, T) and ``R`` rows (B, T, n) of the squares, so ``K = Rᵀ diag(w) R`` and, with the strains
+``E = R Φ``, ``φ_iᵀ K φ_j = Σ_t w_t E_ti E_tj``.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+import scipy.sparse as sp
+
+from inverse.assembly.assembly import Model
+from inverse.assembly.terms import Array, IntArray, Point, Squares
+
+
+@dataclass(frozen=True)
+class Stack:
+    """One matrix of a batch of builds, kept as its squares."""
+
+    squares: Squares
+    a: Array
+
+    @property
+    def weights(self) -> Array:
+        """``w``, shape (B, T)."""
+        return self.a[:, self.squares.weight]
+
+    @cached_property
+    def rows(self) -> Array:
+        """``R``, shape (B, T, n)."""
+        s = self.squares
+        R = np.zeros((len(self.a), len(s), s.size))
+        np.add.at(R, (slice(None), s.entry_row, s.entry_column), self.a[:, s.entry])
+        return R
+
+    def sparse_rows(self, build: int = 0) -> sp.csr_array:
+        """``R`` of one build."""
+        s = self.squares
+        return sp.csr_array((self.a[build, s.entry], (s.entry_row, s.entry_column)), shape=(len(s), s.size))
+
+    def matrix(self) -> Array:
+        """``Rᵀ diag(w) R``, shape (B, n, n)."""
+        return np.asarray(np.swapaxes(self.rows * self.weights[:, :, None], 1, 2) @ self.rows)
+
+    def sparse_matrix(self, build: int = 0) -> sp.csc_array:
+        """The same for one build."""
+        R = self.sparse_rows(build)
+        return sp.csc_array(R.T @ sp.diags_array(self.weights[build]) @ R)
+
+    def strains(self, shapes: Array) -> Array:
+        """``R Φ``, shape (B, T, r)."""
+        if len(self.a) == 1:
+            return np.asarray(self.sparse_rows() @ shapes[0])[None]
+        return np.asarray(self.rows @ shapes)
+
+
+@dataclass(frozen=True)
+class Matrices:
+    """A batch of builds at rest: the point, the values of all monomials, and the stacks over them."""
+
+    model: Model
+    point: Point
+
+    @cached_property
+    def a(self) -> Array:
+        """Values of the monomials, shape (B, N)."""
+        return self.model.monomials.values(self.point)
+
+    @cached_property
+    def mass(self) -> Stack:
+        """``M``."""
+        return Stack(self.model.mass, self.a)
+
+    @cached_property
+    def stiffness(self) -> Stack:
+        """``K``."""
+        return Stack(self.model.stiffness, self.a)
+
+    @cached_property
+    def damping(self) -> Stack:
+        """``C``."""
+        return Stack(self.model.damping, self.a)
+
+    def component_rows(self, names: tuple[str, ...]) -> Array:
+        """Rows that read the named components off the coordinates, shape (B, s, n)."""
+        rows = np.zeros((len(self.a), len(names), self.model.size))
+        for i, name in enumerate(names):
+            for coordinate, monomial in self.model.components[name]:
+                rows[:, i, coordinate] += self.a[:, monomial]
+        return rows
+
+    def owned(self, name: str) -> IntArray:
+        """Mass squares of a part or of one of its axes."""
+        return self.model.mass.owned(name)

@@ -1,0 +1,1 @@
+"""Modes of vibration and their derivatives."""

@@ -1,0 +1,1 @@
+"""What is asked of a set of modes: values, derivatives, requirements. Imports numpy, nothing of ours."""
