@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections import Counter
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -122,9 +123,9 @@ class Assembly:
         return _compiled(book, list(bodies), [link.name for link in self.links])
 
     def _named_bodies(self) -> dict[str, Body]:
-        names = [part.name for part in (*self.bodies, *self.links)]
-        for name in names:
-            if names.count(name) > 1:
+        names = Counter(part.name for part in (*self.bodies, *self.links))
+        for name, count in names.items():
+            if count > 1:
                 raise ModelError(f"two parts are named `{name}`")
         if GROUND in names:
             raise ModelError("no part may be named `ground`")
@@ -228,10 +229,19 @@ def _compiled(book: Book, bodies: list[str], links: list[str]) -> Model:
         damping=tables[2],
         coordinates=tuple(book.coordinates),
         components=rows,
-        bodies={body: tuple(c for c in rows if c.rpartition(".")[0] == body) for body in bodies},
+        bodies=_components_of(bodies, rows),
         parts=parts,
         part_mass=part_mass,
     )
+
+
+def _components_of(bodies: list[str], components: Iterable[str]) -> dict[str, tuple[str, ...]]:
+    """Component names by body."""
+    known: dict[str, tuple[str, ...]] = dict.fromkeys(bodies, ())
+    for component in components:
+        body = component.rpartition(".")[0]
+        known[body] = (*known[body], component)
+    return known
 
 
 def _merged(squares: list[Square]) -> list[Square]:

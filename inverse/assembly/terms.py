@@ -103,6 +103,13 @@ class Monomials:
         """Number of monomials."""
         return len(self.coefficients)
 
+    @cached_property
+    def constant(self) -> NDArray[np.bool_]:
+        """Which are plain numbers, shape (N,)."""
+        constant = np.asarray((self.exponents != 0).sum(axis=1)).ravel() == 0
+        constant[self.mixed] = False
+        return np.asarray(constant)
+
     def values(self, point: Point) -> Array:
         """``a``, shape (B, N)."""
         a: Array = np.exp(point.logarithms @ self.exponents.T) * self.coefficients

@@ -12,12 +12,14 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
+from numpy.typing import NDArray
 
 from inverse.assembly.assembly import Model
-from inverse.assembly.terms import Array, Monomials, Point
+from inverse.assembly.terms import Array, Point
 
 NEWTON_STEPS = 40
-NEWTON_TOLERANCE = 1e-14
+NEWTON_TOLERANCE = 1e-15
+STAGNATION = 1e-8
 DENSE_DEPENDENTS = 64
 """Up to this many dependent dimensions a batch is solved dense and together, beyond it build by build, sparse."""
 
@@ -58,6 +60,7 @@ def _with(point: Point, first: int, dependent: Array) -> Point:
 
 def _newton(model: Model, point: Point, first: int) -> Point:
     dependents, positive = model.dependents, model.positive[first:]
+    before = np.full(point.builds, np.inf)
     for _ in range(NEWTON_STEPS):
         y = point.values[:, first:]
         residual = dependents.vanishing.values(dependents.table.values(point))
@@ -65,13 +68,21 @@ def _newton(model: Model, point: Point, first: int) -> Point:
         with np.errstate(over="ignore", invalid="ignore"):
             new = np.where(positive, y * np.exp(np.clip(step, -1, 1)), y + step)
         point = _with(point, first, new)
-        scale = np.where(positive, 1.0, np.abs(new)) + np.finfo(float).tiny
-        settled = np.abs(step) <= NEWTON_TOLERANCE * np.maximum(scale, np.max(np.abs(new), axis=1, keepdims=True) * 1e-3)
-        if np.all(settled | ~np.isfinite(step)):
-            return point
-    lost = ~np.all(settled, axis=1)
-    point.values[lost, first:] = np.nan
+        size = np.linalg.norm(step / _scale(new, positive), axis=1)
+        # Converged once steps no longer shrink: what is left is rounding.
+        done = (size <= NEWTON_TOLERANCE) | ((size <= STAGNATION) & (size >= before / 4))
+        if np.all(done | ~np.isfinite(size)):
+            break
+        before = size
+    point.values[~done, first:] = np.nan
     return point
+
+
+def _scale(y: Array, positive: NDArray[np.bool_]) -> Array:
+    """What a step is compared with: one for logarithms, for signed dimensions their greatest."""
+    signed = np.abs(np.where(positive, 0.0, y))
+    own = np.maximum(signed, 1e-3 * signed.max(axis=1, keepdims=True, initial=0.0))
+    return np.where(positive, 1.0, own + np.finfo(float).tiny)
 
 
 @dataclass(frozen=True)
@@ -107,22 +118,23 @@ class RestSlopes:
             return np.swapaxes(_dense_solve(G_y, np.swapaxes(right, 1, 2)), 1, 2)
         return np.stack([_sparse_solver(self._single(b)[:, first:])(right[b].T).T for b in range(len(right))])
 
+    def solve_adjoint(self, right: Array) -> Array:
+        """``G_y⁻ᵀ right`` for rows ``right`` (B, k, S)."""
+        first = len(self.point.positive) - len(self.model.dependents)
+        if len(self.model.dependents) <= DENSE_DEPENDENTS:
+            G_y = self._by_dimension()[:, :, first:]
+            return np.swapaxes(_dense_solve(np.swapaxes(G_y, 1, 2), np.swapaxes(right, 1, 2)), 1, 2)
+        return np.stack([_sparse_solver(self._single(b)[:, first:].T)(right[b].T).T for b in range(len(right))])
+
     def pull(self, cotangent: Array) -> Array:
         """Derivatives over all dimensions, (B, k, D + S), to those over the base ones, (B, k, D)."""
         if not len(self.model.dependents):
             return cotangent
         first = len(self.point.positive) - len(self.model.dependents)
-        base, dependent = cotangent[:, :, :first], cotangent[:, :, first:]
+        base, adjoint = cotangent[:, :, :first], self.solve_adjoint(cotangent[:, :, first:])
         if len(self.model.dependents) <= DENSE_DEPENDENTS:
-            slopes = self._by_dimension()
-            adjoint = _dense_solve(np.swapaxes(slopes[:, :, first:], 1, 2), np.swapaxes(dependent, 1, 2))
-            return np.asarray(base - np.swapaxes(adjoint, 1, 2) @ slopes[:, :, :first])
-        out = np.empty_like(base)
-        for b in range(len(base)):
-            slopes_b = self._single(b)
-            adjoint_b = _sparse_solver(slopes_b[:, first:].T)(dependent[b].T)
-            out[b] = base[b] - adjoint_b.T @ slopes_b[:, :first]
-        return out
+            return np.asarray(base - adjoint @ self._by_dimension()[:, :, :first])
+        return np.stack([base[b] - adjoint[b] @ self._single(b)[:, :first] for b in range(len(base))])
 
 
 def _dense_solve(matrices: Array, right: Array) -> Array:

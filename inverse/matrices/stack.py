@@ -11,6 +11,7 @@ from functools import cached_property
 
 import numpy as np
 import scipy.sparse as sp
+from numpy.typing import NDArray
 
 from inverse.assembly.assembly import Model
 from inverse.assembly.terms import Array, IntArray, Point, Squares
@@ -22,11 +23,18 @@ class Stack:
 
     squares: Squares
     a: Array
+    constant: NDArray[np.bool_]
+    """Which monomials are plain numbers, shape (N,)."""
 
     @property
     def weights(self) -> Array:
         """``w``, shape (B, T)."""
         return self.a[:, self.squares.weight]
+
+    @property
+    def varying(self) -> IntArray:
+        """Entries whose monomial depends on dimensions."""
+        return np.flatnonzero(~self.constant[self.squares.entry])
 
     @cached_property
     def rows(self) -> Array:
@@ -72,17 +80,17 @@ class Matrices:
     @cached_property
     def mass(self) -> Stack:
         """``M``."""
-        return Stack(self.model.mass, self.a)
+        return Stack(self.model.mass, self.a, self.model.monomials.constant)
 
     @cached_property
     def stiffness(self) -> Stack:
         """``K``."""
-        return Stack(self.model.stiffness, self.a)
+        return Stack(self.model.stiffness, self.a, self.model.monomials.constant)
 
     @cached_property
     def damping(self) -> Stack:
         """``C``."""
-        return Stack(self.model.damping, self.a)
+        return Stack(self.model.damping, self.a, self.model.monomials.constant)
 
     def component_rows(self, names: tuple[str, ...]) -> Array:
         """Rows that read the named components off the coordinates, shape (B, s, n)."""
