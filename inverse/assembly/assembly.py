@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from inverse.assembly.algebra import Monomial, Square
+from inverse.assembly.algebra import Monomial, Square, symbol
 from inverse.assembly.bodies import Body, Mass, Pendulum
 from inverse.assembly.book import Book
 from inverse.assembly.links import GROUND, Gear, Link, Spring
@@ -19,7 +19,7 @@ from inverse.assembly.statics import Deflection, lean, settle
 from inverse.assembly.terms import Array, Compiler, Monomials, Squares, Sums
 from inverse.errors import ModelError
 from inverse.gravity import STANDARD_GRAVITY
-from inverse.units import Kind
+from inverse.units import Kind, Product
 
 
 @dataclass(frozen=True)
@@ -46,7 +46,7 @@ class Model:
     """An assembly as arrays. ``D`` base dimensions, then the dependent ones; ``n`` coordinates.
 
     `components` gives each reported component as ((coordinate, monomial), ...); `parts` names all
-    bodies and links, whose masses are `part_mass`.
+    bodies and links, whose masses and prices are `part_mass` and `part_cost`.
     """
 
     parameters: Parameters
@@ -62,6 +62,7 @@ class Model:
     bodies: Mapping[str, tuple[str, ...]]
     parts: tuple[str, ...]
     part_mass: Sums
+    part_cost: Sums
 
     @property
     def size(self) -> int:
@@ -84,14 +85,23 @@ class Model:
         return only
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Price:
+    """What one piece of a part costs: a number times powers of the part's own dimensions (SI), by their keys."""
+
+    part: str
+    amount: Product
+
+
 @dataclass(frozen=True, kw_only=True)
 class Assembly:
-    """Bodies, links and imported matrices under gravity [m/s²]."""
+    """Bodies, links and imported matrices under gravity [m/s²], and what their parts cost."""
 
     bodies: tuple[Body, ...] = ()
     links: tuple[Link, ...] = ()
     matrices: tuple[MatrixModel, ...] = ()
     gravity: Amount = STANDARD_GRAVITY
+    prices: tuple[Price, ...] = ()
 
     def compile(
         self, variables: Sequence[Variable] = (), sags: Sequence[Deflection] = ()
@@ -120,7 +130,22 @@ class Assembly:
         lean(book)
         settle(book, self._nominal(register, book), sags)
         book.stiffness += book.geometric
+        for price in self.prices:
+            self._enter_price(book, price)
         return _compiled(book, list(bodies), [link.name for link in self.links])
+
+    def _enter_price(self, book: Book, price: Price) -> None:
+        """The price of all pieces of a part, over its dimensions as they are shown."""
+        known = {name: entry.shown for name, entry in book.register.dimensions.items()}
+        known |= {definition.name: symbol(definition.name) for definition in book.definitions}
+        total = Monomial(price.amount.coefficient) * known.get(f"{price.part}.count", Monomial(1.0))
+        for key, power in price.amount.powers:
+            name = f"{price.part}.{key}"
+            if name not in known:
+                own = sorted(n.removeprefix(f"{price.part}.") for n in known if n.startswith(f"{price.part}."))
+                raise ModelError(f"the price of `{price.part}` names `{key}`; its dimensions are {', '.join(own)}")
+            total = total * known[name] ** float(power)
+        book.part_cost.setdefault(price.part, []).append(total)
 
     def _named_bodies(self) -> dict[str, Body]:
         names = Counter(part.name for part in (*self.bodies, *self.links))
@@ -217,7 +242,10 @@ def _compiled(book: Book, bodies: list[str], links: list[str]) -> Model:
         name: tuple((columns[c], compiler.place(term)) for c, entry in row.items() for term in entry)
         for name, row in book.components.items()
     }
-    part_mass = compiler.sums([tuple(book.part_mass.get(part, ())) for part in parts])
+    part_mass, part_cost = (
+        compiler.sums([tuple(known.get(part, ())) for part in parts])
+        for known in (book.part_mass, book.part_cost)
+    )
     return Model(
         parameters=parameters,
         dependents=_dependents(book, index, positive),
@@ -232,6 +260,7 @@ def _compiled(book: Book, bodies: list[str], links: list[str]) -> Model:
         bodies=_components_of(bodies, rows),
         parts=parts,
         part_mass=part_mass,
+        part_cost=part_cost,
     )
 
 

@@ -94,6 +94,7 @@ class Book:
     definitions: list[Definition] = field(default_factory=list)
     hangings: dict[str, tuple[list[Segment], Motion]] = field(default_factory=dict)
     part_mass: dict[str, list[Monomial]] = field(default_factory=dict)
+    part_cost: dict[str, list[Monomial]] = field(default_factory=dict)
 
     def dimension(
         self, part: str, key: str, kind: Kind, amount: Amount, *, signed: bool = False, sign_apart: bool = False
