@@ -62,6 +62,8 @@ class BuildState:
         Number of rigid modes where it is known.
     changes : ndarray, shape (B, P), optional
         Relative changes of the variables from their start values.
+    given : ModalSolution, optional
+        Modes computed elsewhere, to be used instead.
     """
 
     matrices: Matrices
@@ -69,7 +71,8 @@ class BuildState:
     wanted: int | None = None
     known_rigid: int | None = None
     changes: Array | None = None
-    _known: dict[Quantity, Array] = field(default_factory=dict)
+    given: ModalSolution | None = None
+    _known: dict[Quantity, Array] = field(default_factory=dict, init=False)
 
     @property
     def builds(self) -> int:
@@ -79,7 +82,7 @@ class BuildState:
     @cached_property
     def modes(self) -> ModalSolution:
         """The modes, those of one frequency turned towards the shapes asked for."""
-        modes = solve_modes(self.matrices, self.wanted, self.known_rigid)
+        modes = self.given or solve_modes(self.matrices, self.wanted, self.known_rigid)
         return self._turned(modes) if self.likes else modes
 
     @property

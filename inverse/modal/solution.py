@@ -276,7 +276,7 @@ def _lanczos(A: sp.csc_array, B: sp.csc_array | None, sigma: float, count: int) 
     while True:
         values, vectors = spla.eigsh(A, k=size, M=B, sigma=sigma, OPinv=operator, v0=start, tol=1e-12)
         between = np.sqrt(max(values[-1], 0.0) * max(values[-2], 0.0)) or values[-1] / 2
-        below = _negative_pivots(sp.csc_array(A - between * identity))
+        below = negative_pivots(sp.csc_array(A - between * identity))
         if below <= int(np.sum(values < between)) or size >= A.shape[0] - 2:
             return values[:count], vectors[:, :count]
         size = below + 1
@@ -289,7 +289,7 @@ def _factor(matrix: sp.csc_array) -> spla.SuperLU:
     )
 
 
-def _negative_pivots(matrix: sp.csc_array) -> int:
+def negative_pivots(matrix: sp.csc_array) -> int:
     """Sylvester's inertia: eigenvalues of the pencil below the shift."""
     factors = _factor(matrix)
     return int(np.sum(factors.U.diagonal() < 0))

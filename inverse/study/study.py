@@ -1,0 +1,278 @@
+"""A study and what can be done with it; each command is one method of the same name."""
+
+from __future__ import annotations
+
+import platform
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import scipy
+
+from inverse.assembly.assembly import Assembly, Model
+from inverse.assembly.parameters import Variable
+from inverse.assembly.statics import Deflection
+from inverse.assembly.terms import Array
+from inverse.design.gradient import Outcome, solve_by_gradient
+from inverse.design.problem import Problem
+from inverse.design.result import Design, Result, Status
+from inverse.design.shortfall import Shortfall, explain
+from inverse.design.verification import Verification, verify
+from inverse.errors import StudyError
+from inverse.evaluation.evaluator import Evaluation, Evaluator
+from inverse.study.content import SolveSettings, StudyContent
+from inverse.study.describe import describe, evaluated
+from objectives.base import Objective
+
+VERSION = "0.1.0"
+
+Progress = Callable[[str], None]
+"""Called with a few words about what is being done."""
+
+MISREAD_UNIT = 1e5
+"""A frequency asked for that is off by more than this from all the model can reach is probably a slip of the unit."""
+
+
+def load_study(path: str | Path) -> Study:
+    """Read a study file.
+
+    Raises
+    ------
+    StudyError
+        If the file or what it names is at fault.
+    """
+    from inverse.study.reading import read_study
+
+    return Study.from_content(read_study(Path(path)))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Study:
+    """An assembly, variables and objectives, with the settings of the solver.
+
+    Read one from a file with `load_study`, or build it in Python.
+
+    Examples
+    --------
+    >>> from inverse.assembly.assembly import Assembly
+    >>> from inverse.assembly.bodies import Mass
+    >>> from inverse.assembly.links import Spring
+    >>> block = Mass(name="block", mass=2.0)
+    >>> spring = Spring(name="spring", between=("block", "ground"), rate=8.0)
+    >>> study = Study(assembly=Assembly(bodies=(block,), links=(spring,)))
+    >>> round(study.modes().modes[0].frequency_hz, 6)
+    0.31831
+    """
+
+    assembly: Assembly
+    variables: tuple[Variable, ...] = ()
+    objectives: tuple[Objective, ...] = ()
+    deflections: tuple[Deflection, ...] = ()
+    solve: SolveSettings = field(default_factory=SolveSettings)
+    name: str = "study"
+    title: str = ""
+    text: str = ""
+    warnings: tuple[str, ...] = ()
+
+    @classmethod
+    def from_content(cls, content: StudyContent) -> Study:
+        """The study that a file states."""
+        return cls(
+            assembly=content.assembly,
+            variables=content.variables,
+            objectives=content.objectives,
+            deflections=content.deflections,
+            solve=content.solve,
+            name=content.name,
+            title=content.title,
+            text=content.text,
+            warnings=content.warnings,
+        )
+
+    @cached_property
+    def model(self) -> Model:
+        """The assembly as tables of terms."""
+        return self.assembly.compile(self.variables, self.deflections)
+
+    def modes(self, design: Mapping[str, float] | None = None, *, seed: int | None = None) -> Result:
+        """Modes of the design as it stands, or of given values of the variables, and its objectives judged.
+
+        Raises
+        ------
+        StudyError
+            If a variable has no value, or the design does not rest in stable equilibrium.
+        """
+        began = time.perf_counter()
+        evaluator = Evaluator(self.model, self.objectives)
+        evaluation = evaluated(evaluator, self._standing(design))
+        self._refuse_unstable(evaluation)
+        record = describe(evaluation)
+        status = Status.MET if record.met else Status.NOT_MET
+        message = _verdict(record) if self.objectives else "modes of the design as it stands"
+        return self._result("modes", status, message, record, evaluator, began, seed, route="evaluation")
+
+    def size(self, *, seed: int | None = None, progress: Progress = lambda _: None) -> Result:
+        """Find parts whose assembly does what the objectives ask.
+
+        Raises
+        ------
+        StudyError
+            If the study has nothing to judge a design by, or no design in the ranges can rest.
+        """
+        began = time.perf_counter()
+        problem = Problem(Evaluator(self.model, self.objectives))
+        if not len(problem.free):
+            outcome = Outcome(np.empty((0, 0)), np.empty(0), "there is nothing to choose")
+        elif not self.objectives:
+            raise StudyError(
+                f"{self.name}: `size` needs at least one [[objective]] to choose the variables by; "
+                "use `modes` to see the design as it stands"
+            )
+        else:
+            self._refuse_route()
+            outcome = solve_by_gradient(
+                problem,
+                seed=self._seed(seed),
+                starts=self.solve.starts,
+                alternatives=self.solve.alternatives,
+                progress=progress,
+            )
+        return self._sized(problem, outcome, began, seed, progress)
+
+    def _sized(
+        self, problem: Problem, outcome: Outcome, began: float, seed: int | None, progress: Progress
+    ) -> Result:
+        evaluation = evaluated(problem.evaluator, problem.designs(outcome.closest)[0])
+        self._refuse_unstable(evaluation)
+        record = describe(evaluation)
+        progress("checking by a second path")
+        verification = verify(evaluation)
+        shortfall = None
+        if not record.met and len(problem.free):
+            progress("looking for what would help")
+            shortfall = explain(problem, outcome.closest, self._seed(seed))
+        status = Status.MET if record.met and verification.agrees else Status.NOT_MET
+        others = [describe(evaluated(problem.evaluator, problem.designs(t)[0])) for t in outcome.designs[1:]]
+        return self._result(
+            "size",
+            status,
+            _message(record, shortfall, verification, outcome),
+            record,
+            problem.evaluator,
+            began,
+            seed,
+            route="gradient" if len(problem.free) else "evaluation",
+            alternatives=tuple(others),
+            shortfall=shortfall,
+            verification=verification,
+        )
+
+    def _seed(self, seed: int | None) -> int:
+        return self.solve.seed if seed is None else seed
+
+    def _standing(self, design: Mapping[str, float] | None) -> Array:
+        values = {v.name: v.value for v in self.variables} | dict(design or {})
+        missing = [v.name for v in self.variables if values.get(v.name) is None]
+        if missing:
+            raise StudyError(
+                f"{self.name}: no value for {', '.join(f'`{name}`' for name in missing)}; give each a `start`, or take "
+                "the design from an earlier run with --design DIR"
+            )
+        return np.array([values[v.name] for v in self.variables], float)
+
+    def _refuse_unstable(self, evaluation: Evaluation) -> None:
+        if evaluation.state.modes.stable[0]:
+            return
+        modes = evaluation.state.modes
+        if not np.isfinite(modes.eigenvalues[0]).all():
+            raise StudyError(f"{self.name}: the assembly has no rest position at this design, or a mass is not positive")
+        j = int(np.argmin(modes.eigenvalues[0]))
+        rows = evaluation.state.matrices.component_rows(names := tuple(self.model.components))[0]
+        worst = names[int(np.argmax(np.abs(rows @ modes.shapes[0, :, j])))]
+        raise StudyError(
+            f"{self.name}: the assembly topples: its rest position is not a stable equilibrium, and `{worst}` moves away "
+            "fastest; stiffen its links, lower its centre of mass or widen the support"
+        )
+
+    def _refuse_route(self) -> None:
+        if self.solve.route not in ("auto", "gradient"):
+            raise StudyError(
+                f"{self.name}: solve.route = \"{self.solve.route}\" is not available in this version; use \"auto\" or \"gradient\""
+            )
+
+    def _result(
+        self,
+        command: str,
+        status: Status,
+        message: str,
+        record: Design,
+        evaluator: Evaluator,
+        began: float,
+        seed: int | None,
+        **rest: Any,
+    ) -> Result:
+        return Result(
+            study=self.name,
+            title=self.title,
+            command=command,
+            status=status,
+            message=message,
+            seed=self._seed(seed),
+            design=record,
+            warnings=(*self.warnings, *_doubts(evaluator, record)),
+            modal_solves=evaluator.modal_solves,
+            wall_s=time.perf_counter() - began,
+            versions={
+                "modewright": VERSION,
+                "numpy": np.__version__,
+                "scipy": scipy.__version__,
+                "python": platform.python_version(),
+            },
+            **rest,
+        )
+
+
+def _verdict(record: Design) -> str:
+    judged = [row for row in record.objectives if row.met is not None]
+    missed = [row.label for row in judged if not row.met]
+    if missed:
+        return f"missed: {', '.join(missed)}"
+    return "every objective is met" if judged else "no objective has a window or a limit to judge by"
+
+
+def _message(
+    record: Design, shortfall: Shortfall | None, verification: Verification, outcome: Outcome
+) -> str:
+    if record.met and not verification.agrees:
+        return "the second path does not confirm the design; it is not called met"
+    if shortfall is None:
+        return _verdict(record)
+    parts = [_verdict(record), outcome.stopped]
+    if shortfall.held:
+        ends = ", ".join(f"`{name}` ({end})" for name, end in shortfall.held.items())
+        parts.append(f"at the end of their range: {ends}")
+    if shortfall.opposed:
+        parts.append("pulling against each other: " + ", ".join(f"{a} and {b}" for a, b in shortfall.opposed))
+    if shortfall.relaxations:
+        parts.append("what would do: " + "; or ".join(shortfall.relaxations))
+    return "; ".join(parts)
+
+
+def _doubts(evaluator: Evaluator, record: Design) -> tuple[str, ...]:
+    """Warnings that need the design: slips of a unit."""
+    doubts = []
+    frequencies = [mode.frequency_hz for mode in record.modes]
+    for row in record.objectives:
+        wanted = row.asked.get("target") or row.asked.get("at_least") or row.asked.get("at_most")
+        if row.unit != "Hz" or not wanted or not frequencies:
+            continue
+        low, high = min(frequencies), max(frequencies)
+        if wanted > MISREAD_UNIT * high or wanted < low / MISREAD_UNIT:
+            doubts.append(
+                f"`{row.label}` asks for {wanted:.4g} Hz, the modes lie between {low:.4g} and {high:.4g} Hz: MHz or mHz?"
+            )
+    return tuple(doubts)
