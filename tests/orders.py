@@ -23,7 +23,8 @@ def order_of_error(value: Callable[[float], np.ndarray], slope: np.ndarray) -> t
     alone and the order is given as 2.
     """
     errors = errors_by_step(value, slope)
-    falling = np.flatnonzero(errors > 100 * errors.min())
+    before_rounding = errors[: int(np.argmin(errors))]
+    falling = np.flatnonzero(before_rounding > 100 * errors.min())
     if len(falling) < 4:
         return 2.0, float(errors.min())
     slopes = np.diff(np.log(errors[falling])) / np.diff(np.log(STEPS[falling]))
