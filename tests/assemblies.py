@@ -41,8 +41,7 @@ def series_of_pendulums(n: int, length: float = 1.0, gravity: float = 9.80665) -
     """n equal pendulums, each hung from the bob above."""
     return Assembly(
         bodies=tuple(
-            Pendulum(name=f"p{i}", mass=1.0, length=length, hung_from=f"p{i - 1}" if i else None)
-            for i in range(n)
+            Pendulum(name=f"p{i}", mass=1.0, length=length, hung_from=f"p{i - 1}" if i else None) for i in range(n)
         ),
         gravity=gravity,
     )
@@ -116,9 +115,7 @@ def rod_tower(areas_cm2: list[float], modulus: float, density: float, added: flo
 
     def rod(first: str, second: str, group: int) -> None:
         area = areas_cm2[group] * 1e-4
-        rods.append(
-            Rod(name=f"rod{len(rods)}", between=(first, second), area=area, modulus=modulus, density=density)
-        )
+        rods.append(Rod(name=f"rod{len(rods)}", between=(first, second), area=area, modulus=modulus, density=density))
 
     for level in range(4, 0, -1):
         group = 4 * (4 - level)
@@ -184,7 +181,10 @@ def every_part() -> dict[str, Assembly]:
         "platform in space on loaded mounts": Assembly(
             bodies=(
                 Platform(
-                    name="stage", mass=100.0, inertia=(4.0, 6.0, 8.0, 0.1, 0.2, 0.3), centre=(0.01, 0.02, 0.03)
+                    name="stage",
+                    mass=100.0,
+                    inertia=(4.0, 6.0, 8.0, 0.1, 0.2, 0.3),
+                    centre=(0.01, 0.02, 0.03),
                 ),
             ),
             links=mounts,
@@ -196,7 +196,13 @@ def every_part() -> dict[str, Assembly]:
             ),
             links=(
                 Spring(name="left", between=("stage", "ground"), at=(-0.4, -0.1), rate=20000.0, preload=100.0),
-                Spring(name="right", between=("stage", "ground"), at=(0.4, -0.1), rate=30000.0, direction=(0.3, 1.0)),
+                Spring(
+                    name="right",
+                    between=("stage", "ground"),
+                    at=(0.4, -0.1),
+                    rate=30000.0,
+                    direction=(0.3, 1.0),
+                ),
                 Spring(name="hanger", between=("stage", "block"), at=(0.2, -0.3), rate=900.0),
             ),
         ),

@@ -103,9 +103,7 @@ class Assembly:
     gravity: Amount = STANDARD_GRAVITY
     prices: tuple[Price, ...] = ()
 
-    def compile(
-        self, variables: Sequence[Variable] = (), sags: Sequence[Deflection] = ()
-    ) -> Model:
+    def compile(self, variables: Sequence[Variable] = (), sags: Sequence[Deflection] = ()) -> Model:
         """Tables of terms for these variables; `sags` are the static deflections that will be asked for.
 
         Raises
@@ -148,7 +146,7 @@ class Assembly:
         book.part_cost.setdefault(price.part, []).append(total)
 
     def _named_bodies(self) -> dict[str, Body]:
-        names = Counter(part.name for part in (*self.bodies, *self.links))
+        names = Counter([body.name for body in self.bodies] + [link.name for link in self.links])
         for name, count in names.items():
             if count > 1:
                 raise ModelError(f"two parts are named `{name}`")
@@ -165,7 +163,7 @@ class Assembly:
         """Pendulums and sliding masses joined, through any links, to a preloaded spring on one of them."""
         swinging = {name for name, b in bodies.items() if isinstance(b, Pendulum | Mass)}
         joins = [set(link.between) & swinging for link in self.links]
-        joins += [{b.name, b.hung_from} & swinging for b in self.bodies if isinstance(b, Pendulum)]
+        joins += [{b.name, b.hung_from or b.name} & swinging for b in self.bodies if isinstance(b, Pendulum)]
         moved = {
             name
             for link in self.links
@@ -201,9 +199,7 @@ class Assembly:
     def _nominal(self, register: Register, book: Book) -> dict[str, float]:
         """Values at a generic point: start values, or the middle of each range."""
         values = {name: _middle(v) for name, v in register.variables.items()}
-        known = {
-            name: _value(dimension.follows, values) for name, dimension in register.dimensions.items()
-        }
+        known = {name: _value(dimension.follows, values) for name, dimension in register.dimensions.items()}
         for definition in book.definitions:
             total = sum(_value(term, known) for term in definition.seed)
             known[definition.name] = float(max(total, 0.0) ** definition.seed_power if definition.positive else total)
@@ -235,16 +231,13 @@ def _compiled(book: Book, bodies: list[str], links: list[str]) -> Model:
     columns = {name: i for i, name in enumerate(book.coordinates)}
     compiler = Compiler()
     parts = tuple(dict.fromkeys((*bodies, *links)))
-    tables = [
-        compiler.squares(_merged(squares), columns) for squares in (book.mass, book.stiffness, book.damping)
-    ]
+    tables = [compiler.squares(_merged(squares), columns) for squares in (book.mass, book.stiffness, book.damping)]
     rows = {
         name: tuple((columns[c], compiler.place(term)) for c, entry in row.items() for term in entry)
         for name, row in book.components.items()
     }
     part_mass, part_cost = (
-        compiler.sums([tuple(known.get(part, ())) for part in parts])
-        for known in (book.part_mass, book.part_cost)
+        compiler.sums([tuple(known.get(part, ())) for part in parts]) for known in (book.part_mass, book.part_cost)
     )
     return Model(
         parameters=parameters,

@@ -97,7 +97,14 @@ class Book:
     part_cost: dict[str, list[Monomial]] = field(default_factory=dict)
 
     def dimension(
-        self, part: str, key: str, kind: Kind, amount: Amount, *, signed: bool = False, sign_apart: bool = False
+        self,
+        part: str,
+        key: str,
+        kind: Kind,
+        amount: Amount,
+        *,
+        signed: bool = False,
+        sign_apart: bool = False,
     ) -> Monomial:
         """Enter a dimension of a part."""
         return self.register.take(part, key, kind, amount, signed=signed, sign_apart=sign_apart)

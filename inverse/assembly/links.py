@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import ClassVar, Protocol
+from typing import Protocol
 
 import numpy as np
 
@@ -296,8 +296,7 @@ class Rod:
         E = book.dimension(self.name, "modulus", Kind.MODULUS, self.modulus)
         motions = [joint.motion(book, self.name, "", None) for joint in (first, second)]
         relative = {
-            axis: plus(motions[1].get(axis, {}), times(-1.0, motions[0].get(axis, {})))
-            for axis in first.directions
+            axis: plus(motions[1].get(axis, {}), times(-1.0, motions[0].get(axis, {}))) for axis in first.directions
         }
         stretch = plus(*(times(cosines[axis], row) for axis, row in relative.items()))
         book.stiffness.append(Square(self.name, "", E * A / length, stretch))
@@ -321,7 +320,9 @@ class Rod:
         if not isinstance(first, Joint) or not isinstance(second, Joint):
             raise ModelError(f"rod `{self.name}` must run between two joints, found {' and '.join(self.between)}")
         if first.directions != second.directions:
-            raise ModelError(f"rod `{self.name}` joins a joint in the plane to one in space: give both the same number of coordinates")
+            raise ModelError(
+                f"rod `{self.name}` joins a joint in the plane to one in space: give both the same number of coordinates"
+            )
         return first, second
 
     def _geometry(self, book: Book, first: Joint, second: Joint) -> tuple[Monomial, dict[str, Monomial]]:
@@ -329,9 +330,7 @@ class Rod:
         a, b = first.place(book), second.place(book)
         length = symbol(f"{self.name}.length")
         cosines = {axis: symbol(f"{self.name}.cosine.{axis}") for axis in a}
-        squares = tuple(
-            term for axis in a for term in (b[axis] ** 2, -2.0 * a[axis] * b[axis], a[axis] ** 2)
-        )
+        squares = tuple(term for axis in a for term in (b[axis] ** 2, -2.0 * a[axis] * b[axis], a[axis] ** 2))
         unit = (*(n**2 for n in cosines.values()), -ONE)
         book.definitions.append(Definition(f"{self.name}.length", True, squares, 0.5, unit))
         for axis, n in cosines.items():

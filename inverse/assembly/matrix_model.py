@@ -88,6 +88,4 @@ class MatrixModel:
         ]
 
     def _row(self, vector: Array) -> Row:
-        return {
-            f"{label}.x": (Monomial(float(v)),) for label, v in zip(self.labels, vector, strict=True) if v
-        }
+        return {f"{label}.x": (Monomial(float(v)),) for label, v in zip(self.labels, vector, strict=True) if v}

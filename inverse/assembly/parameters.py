@@ -76,7 +76,14 @@ class Register:
     dimensions: dict[str, Dimension] = field(default_factory=dict)
 
     def take(
-        self, part: str, key: str, kind: Kind, amount: Amount, *, signed: bool = False, sign_apart: bool = False
+        self,
+        part: str,
+        key: str,
+        kind: Kind,
+        amount: Amount,
+        *,
+        signed: bool = False,
+        sign_apart: bool = False,
     ) -> Monomial:
         """Enter a dimension and return it as a monomial over dimensions.
 
@@ -116,9 +123,7 @@ class Register:
             )
 
     def _is_positive(self, follows: Monomial) -> bool:
-        return follows.coefficient > 0 and all(
-            self.variables[variable].positive for variable, _ in follows.powers
-        )
+        return follows.coefficient > 0 and all(self.variables[variable].positive for variable, _ in follows.powers)
 
     def _over_variables(self, name: str, amount: Amount) -> Monomial:
         if not isinstance(amount, Product):

@@ -85,10 +85,7 @@ def settlement(coordinate: str, case: tuple[str, float] | None) -> str:
 def _applied(row: Row, names: dict[str, str]) -> Polynomial:
     """``row · u``."""
     return collected(
-        term * symbol(names[coordinate])
-        for coordinate, entry in row.items()
-        if coordinate in names
-        for term in entry
+        term * symbol(names[coordinate]) for coordinate, entry in row.items() if coordinate in names for term in entry
     )
 
 
@@ -135,9 +132,9 @@ def unresisted(rows: Sequence[Row], coordinates: list[str], nominal: dict[str, f
     """Orthonormal basis (columns) of the motions that stretch no row, at the nominal point."""
     if len(coordinates) > LARGEST_NULL_SPACE:
         return np.zeros((len(coordinates), 0))
-    table = np.array(
-        [[_number(row.get(c, ()), nominal) for c in coordinates] for row in rows], float
-    ).reshape(len(rows), len(coordinates))
+    table = np.array([[_number(row.get(c, ()), nominal) for c in coordinates] for row in rows], float).reshape(
+        len(rows), len(coordinates)
+    )
     scale = np.linalg.norm(table, axis=1, keepdims=True)
     table = table / np.where(scale > 0, scale, 1.0)
     columns = np.linalg.norm(table, axis=0)
@@ -149,7 +146,11 @@ def unresisted(rows: Sequence[Row], coordinates: list[str], nominal: dict[str, f
 
 
 def _refuse_unsupported(
-    book: Book, free: Array, coordinates: list[str], pushes: list[tuple[Monomial, Row]], nominal: dict[str, float]
+    book: Book,
+    free: Array,
+    coordinates: list[str],
+    pushes: list[tuple[Monomial, Row]],
+    nominal: dict[str, float],
 ) -> None:
     total = np.zeros(len(coordinates))
     largest = np.zeros(len(coordinates))
@@ -166,8 +167,7 @@ def _refuse_unsupported(
 
 def _number(terms: Polynomial, nominal: dict[str, float]) -> float:
     return sum(
-        term.coefficient * float(np.prod([nominal[name] ** power for name, power in term.powers]))
-        for term in terms
+        term.coefficient * float(np.prod([nominal[name] ** power for name, power in term.powers])) for term in terms
     )
 
 
@@ -177,9 +177,7 @@ def lean(book: Book) -> None:
     Moment about each pivot: ``s Σ m g L + Σ T ∂e/∂θ = 0`` with ``T = p + k e`` and ``e`` the sum of
     lever · sine over the hanging lengths and of the slides of sliding masses.
     """
-    segments = {
-        segment.pendulum: segment for chain, _ in book.hangings.values() for segment in chain if segment.sine
-    }
+    segments = {segment.pendulum: segment for chain, _ in book.hangings.values() for segment in chain if segment.sine}
     moments: dict[str, list[Monomial]] = {name: [] for name in segments}
     slides: dict[str, list[Monomial]] = {}
     for segment, moment in book.hanging:

@@ -30,6 +30,14 @@ DENSE_EXPONENTS = 200_000
 """Up to this many entries a dense table of exponents is faster than a sparse one."""
 
 
+def add_at(out: Array, places: IntArray, values: Array) -> None:
+    """``out[..., places] += values``, counting places as often as they occur."""
+    if np.bincount(places, minlength=1).max() <= 1:
+        out[..., places] += values
+    else:
+        np.add.at(out.T, places, values.T)
+
+
 @dataclass(frozen=True)
 class Point:
     """A batch of builds in the space of dimensions: ``d`` of shape (B, D), and which are positive."""
@@ -64,9 +72,7 @@ class Monomials:
     signed_power: IntArray
 
     @classmethod
-    def compile(
-        cls, monomials: Sequence[Monomial], index: Mapping[str, int], positive: NDArray[np.bool_]
-    ) -> Monomials:
+    def compile(cls, monomials: Sequence[Monomial], index: Mapping[str, int], positive: NDArray[np.bool_]) -> Monomials:
         """Arrays from names.
 
         Raises
@@ -106,7 +112,7 @@ class Monomials:
     @cached_property
     def constant(self) -> NDArray[np.bool_]:
         """Which are plain numbers, shape (N,)."""
-        constant = np.asarray((self.exponents != 0).sum(axis=1)).ravel() == 0
+        constant = np.asarray(abs(self.exponents).sum(axis=1)).ravel() == 0
         constant[self.mixed] = False
         return np.asarray(constant)
 
@@ -123,9 +129,7 @@ class Monomials:
 
     def _signed_slopes(self, point: Point) -> list[Array]:
         """``∂a/∂d`` for each column of signed factors, (B, S) each; no division, for ``d`` may be zero."""
-        positive_part = (
-            np.exp(point.logarithms @ self.exponents[self.mixed].T) * self.coefficients[self.mixed]
-        )
+        positive_part = np.exp(point.logarithms @ self.exponents[self.mixed].T) * self.coefficients[self.mixed]
         factors = self._signed_factors(point)
         slopes = []
         for k in range(self.signed_power.shape[1]):
@@ -143,8 +147,7 @@ class Monomials:
         builds, k, n = cotangent.shape
         out = ((cotangent * a[:, None, :]).reshape(-1, n) @ self.exponents).reshape(builds, k, -1)
         for column, slope in enumerate(self._signed_slopes(point) if len(self.mixed) else ()):
-            place = (slice(None), slice(None), self.signed_dimension[:, column])
-            np.add.at(out, place, cotangent[:, :, self.mixed] * slope[:, None])
+            add_at(out, self.signed_dimension[:, column], cotangent[:, :, self.mixed] * slope[:, None])
         return np.asarray(out)
 
     def jacobian(self, point: Point, a: Array) -> sp.csr_array:
@@ -161,9 +164,7 @@ class Monomials:
         table = sp.coo_array(sp.csr_array(self.exponents))
         for i, j, e in zip(*table.coords, table.data, strict=True):
             factors.setdefault(int(i), []).append((int(j), float(e), True))
-        for i, dimensions, powers in zip(
-            self.mixed, self.signed_dimension, self.signed_power, strict=True
-        ):
+        for i, dimensions, powers in zip(self.mixed, self.signed_dimension, self.signed_power, strict=True):
             known = factors.setdefault(int(i), [])
             known += [(int(j), float(e), False) for j, e in zip(dimensions, powers, strict=True) if e]
         d = point.values[0]
@@ -213,6 +214,11 @@ class Squares:
         """Number of squares."""
         return len(self.weight)
 
+    @cached_property
+    def uncoupled(self) -> bool:
+        """Whether every row has one entry at most, so that the matrix is diagonal."""
+        return bool(np.bincount(self.entry_row, minlength=1).max() <= 1)
+
     def owned(self, name: str) -> IntArray:
         """Squares of a part, or of one of its axes (``stage.ry``)."""
         return np.array(
@@ -232,7 +238,7 @@ class Sums:
     def values(self, a: Array) -> Array:
         """The sums, shape (B, S)."""
         out = np.zeros((len(a), self.size))
-        np.add.at(out, (slice(None), self.place), a[:, self.term])
+        add_at(out, self.place, a[:, self.term])
         return out
 
 

@@ -29,7 +29,7 @@ def constrained_minimum(at: Callable[[Array], Evaluated], start: Array, lower: A
         Where it stopped; whether that is feasible is for the caller to check.
     """
     # Imported here because it takes longer to load than most studies take to solve.
-    from scipy.optimize import Bounds, minimize
+    from scipy.optimize import Bounds, OptimizeResult, minimize
 
     latest: dict[bytes, Evaluated] = {}
 
@@ -46,7 +46,7 @@ def constrained_minimum(at: Callable[[Array], Evaluated], start: Array, lower: A
             )
         return latest[key]
 
-    found = minimize(
+    found: OptimizeResult = minimize(  # type: ignore[call-overload]  # the stubs know no dictionary of constraints
         lambda t: known(t)[0],
         start,
         jac=lambda t: known(t)[1],

@@ -15,14 +15,14 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
-
-from inverse.assembly.terms import Array
-from inverse.design.constrained import Evaluated, constrained_minimum
 from inverse.design.population import PopulationResult, solve_population
+from objectives.keep_out import KeepOut
+
+from inverse.assembly.terms import Array, IntArray
+from inverse.design.constrained import Evaluated, constrained_minimum
 from inverse.design.problem import Problem
 from inverse.evaluation.evaluator import Choices, Evaluation
 from objectives.base import Maximise
-from objectives.keep_out import KeepOut
 
 EXACT = 1e-8
 """Residuals, in windows, at which a target counts as hit."""
@@ -94,7 +94,7 @@ class _Attempt:
 
     words: str
     share: float | None
-    choices: dict[int, Array] | None
+    choices: dict[int, IntArray] | None
 
     def run(self, problem: Problem, rng: np.random.Generator, starts: int, wanted: int) -> PopulationResult:
         def residuals(t: Array) -> tuple[Array, Array]:
@@ -103,7 +103,14 @@ class _Attempt:
 
         first = None if problem.start is None else problem.start[None]
         return solve_population(
-            residuals, problem.lower, problem.upper, rng=rng, starts=starts, first=first, wanted=wanted, tolerance=EXACT
+            residuals,
+            problem.lower,
+            problem.upper,
+            rng=rng,
+            starts=starts,
+            first=first,
+            wanted=wanted,
+            tolerance=EXACT,
         )
 
 
@@ -118,7 +125,7 @@ def _attempts(problem: Problem, rng: np.random.Generator) -> Iterator[_Attempt]:
         yield _Attempt("entering every window, modes on other sides of the bands", INSIDE, choice)
 
 
-def _choices(problem: Problem, rng: np.random.Generator) -> Iterator[dict[int, Array]]:
+def _choices(problem: Problem, rng: np.random.Generator) -> Iterator[dict[int, IntArray]]:
     """Ways past the bands that random designs are nearest to, most frequent first."""
     bands = [(i, o) for i, o in enumerate(problem.evaluator.objectives) if isinstance(o, KeepOut)]
     if not bands:

@@ -179,8 +179,16 @@ class Result:
                 rows = [{"name": name, "value": value, "unit": units[name]} for name, value in values.items()]
             case "modes":
                 rows = [
-                    {"number": m.number, "frequency [Hz]": m.frequency_hz, "damping ratio [1]": m.damping_ratio}
-                    | {f"{body} {i + 1}" if len(u) > 1 else body: v for body, u in m.shape.items() for i, v in enumerate(u)}
+                    {
+                        "number": m.number,
+                        "frequency [Hz]": m.frequency_hz,
+                        "damping ratio [1]": m.damping_ratio,
+                    }
+                    | {
+                        f"{body} {i + 1}" if len(u) > 1 else body: v
+                        for body, u in m.shape.items()
+                        for i, v in enumerate(u)
+                    }
                     for m in design.modes
                 ]
             case "objectives":

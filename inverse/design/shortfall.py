@@ -9,12 +9,12 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from inverse.design.population import solve_population
 
 from inverse.assembly.parameters import Variable
 from inverse.assembly.terms import Array
 from inverse.design.constrained import Evaluated, constrained_minimum
 from inverse.design.gradient import room
-from inverse.design.population import solve_population
 from inverse.design.problem import Problem
 from inverse.evaluation.evaluator import Evaluator
 from inverse.units import Kind, format_quantity, quantity_dimension
@@ -81,9 +81,7 @@ def _opposed(problem: Problem, point: Array) -> tuple[tuple[str, str], ...]:
                 continue
         if np.isfinite(pull).all() and np.linalg.norm(pull) > 0:
             pulls[objective.label] = pull / np.linalg.norm(pull)
-    labels = [
-        o.label for o, v in zip(problem.evaluator.objectives, values, strict=True) if _misses(o, float(v))
-    ]
+    labels = [o.label for o, v in zip(problem.evaluator.objectives, values, strict=True) if _misses(o, float(v))]
     pairs = {
         frozenset((one, other)): float(pulls[one] @ pulls[other])
         for one in labels
@@ -93,10 +91,7 @@ def _opposed(problem: Problem, point: Array) -> tuple[tuple[str, str], ...]:
     order = [label for label in pulls]
     ranked = sorted(pairs, key=lambda pair: pairs[pair])
     return tuple(
-        (first, second)
-        for pair in ranked
-        if pairs[pair] < OPPOSED
-        for first, second in [sorted(pair, key=order.index)]
+        (first, second) for pair in ranked if pairs[pair] < OPPOSED for first, second in [sorted(pair, key=order.index)]
     )
 
 
@@ -114,9 +109,7 @@ def _wider_windows(problem: Problem, point: Array) -> tuple[str, ...]:
         return ()
     worst = max(-float(left.min()), 0.0)
     start = np.append(point, worst)
-    found = constrained_minimum(
-        at, start, np.append(problem.lower, 0.0), np.append(problem.upper, 2 * worst + 1e-9)
-    )
+    found = constrained_minimum(at, start, np.append(problem.lower, 0.0), np.append(problem.upper, 2 * worst + 1e-9))
     nearest = point if at(found)[2].min() < -1e-6 else found[:-1]
     values = problem.evaluate(nearest[None]).values()[0]
     changes = [
@@ -136,9 +129,7 @@ def _window_change(objective: Objective, value: float) -> str:
                 f"widen `{objective.label}` from ± {format_quantity(within, unit)} to ± {format_quantity(needed, unit)}"
             )
         case AtLeast(limit) | AtMost(limit):
-            return (
-                f"move the limit of `{objective.label}` from {format_quantity(limit, unit)} to {format_quantity(value, unit)}"
-            )
+            return f"move the limit of `{objective.label}` from {format_quantity(limit, unit)} to {format_quantity(value, unit)}"
         case _:
             return objective.label
 
@@ -154,7 +145,7 @@ def _wider_ranges(problem: Problem, point: Array, held: dict[str, str], seed: in
         opened = _opened(problem, name, end)
         k = [problem.variables[i].name for i in problem.free].index(name)
         found = solve_population(
-            lambda t, opened=opened: opened.windows(t, 0.9),  # type: ignore[misc]
+            lambda t, opened=opened: opened.windows(t, 0.9),
             opened.lower,
             opened.upper,
             rng=np.random.default_rng(seed),

@@ -128,8 +128,7 @@ class Evaluation:
         """
         chosen = choices or {}
         pursuits = [
-            objective.pursue(self.state, chosen.get(i))
-            for i, objective in enumerate(self.evaluator.objectives)
+            objective.pursue(self.state, chosen.get(i)) for i, objective in enumerate(self.evaluator.objectives)
         ]
         weights = [objective.weight for objective in self.evaluator.objectives]
         return (
@@ -139,7 +138,8 @@ class Evaluation:
 
     def _stacked(self, parts: Sequence[Measured], weights: Sequence[float]) -> tuple[Array, Array]:
         values = np.concatenate(
-            [np.empty((self.state.builds, 0)), *(w * p.values for w, p in zip(weights, parts, strict=True))], axis=1
+            [np.empty((self.state.builds, 0)), *(w * p.values for w, p in zip(weights, parts, strict=True))],
+            axis=1,
         )
         slopes = self._over_variables(parts)
         columns = np.concatenate(

@@ -12,6 +12,7 @@ from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
+from objectives.identity import Identification, identify
 
 from inverse.assembly.statics import Deflection
 from inverse.assembly.terms import Array, IntArray, Sums
@@ -25,7 +26,6 @@ from inverse.modal.sensitivity import (
     to_dimensions,
 )
 from inverse.modal.solution import ModalSolution, solve_modes
-from objectives.identity import Identification, identify
 from objectives.state import (
     Changes,
     Displacement,
@@ -184,7 +184,11 @@ class BuildState:
         for like in self.likes:
             a = np.array([value for _, value in like.pattern])
             rows = self._rows(like.components)[b] @ cluster
-            W = self[MassBlock(like.components)][b] if MassBlock(like.components) in self._known else self._block(b, like)
+            W = (
+                self[MassBlock(like.components)][b]
+                if MassBlock(like.components) in self._known
+                else self._block(b, like)
+            )
             wanted.append(rows.T @ W @ a)
         size = [float(np.linalg.norm(w)) for w in wanted]
         order = np.argsort(size)[::-1]
@@ -226,7 +230,11 @@ class Slopes:
     def add(self, gradient: Gradient, first: int = 0) -> None:
         """Add the gradient of values ``first, first + 1, …``."""
         for quantity, cotangent in gradient.items():
-            self._add(quantity, np.nan_to_num(np.asarray(cotangent, float)), slice(first, first + cotangent.shape[1]))
+            self._add(
+                quantity,
+                np.nan_to_num(np.asarray(cotangent, float)),
+                slice(first, first + cotangent.shape[1]),
+            )
 
     def _add(self, quantity: Quantity, cotangent: Array, at: slice) -> None:
         state, matrices, modes = self.state, self.state.matrices, self.state.modes

@@ -152,7 +152,7 @@ def _one_solve(matrix: Array, right: Array) -> Array:
         return np.full_like(right, np.nan)
 
 
-def _sparse_solver(matrix: sp.csr_array) -> Callable[[Array], Array]:
+def _sparse_solver(matrix: sp.sparray) -> Callable[[Array], Array]:
     """Solver of one sparse system, NaN where it is singular."""
     try:
         solve: Callable[[Array], Array] = spla.splu(sp.csc_array(matrix)).solve

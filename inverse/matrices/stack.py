@@ -14,7 +14,7 @@ import scipy.sparse as sp
 from numpy.typing import NDArray
 
 from inverse.assembly.assembly import Model
-from inverse.assembly.terms import Array, IntArray, Point, Squares
+from inverse.assembly.terms import Array, IntArray, Point, Squares, add_at
 
 
 @dataclass(frozen=True)
@@ -40,9 +40,9 @@ class Stack:
     def rows(self) -> Array:
         """``R``, shape (B, T, n)."""
         s = self.squares
-        R = np.zeros((len(self.a), len(s), s.size))
-        np.add.at(R, (slice(None), s.entry_row, s.entry_column), self.a[:, s.entry])
-        return R
+        R = np.zeros((len(self.a), len(s) * s.size))
+        add_at(R, s.entry_row * s.size + s.entry_column, self.a[:, s.entry])
+        return R.reshape(len(self.a), len(s), s.size)
 
     def sparse_rows(self, build: int = 0) -> sp.csr_array:
         """``R`` of one build."""
@@ -58,9 +58,22 @@ class Stack:
         R = self.sparse_rows(build)
         return sp.csc_array(R.T @ sp.diags_array(self.weights[build]) @ R)
 
+    def only(self, build: int) -> Stack:
+        """The same for one build alone."""
+        return Stack(self.squares, self.a[[build]], self.constant)
+
+    def diagonal(self) -> Array | None:
+        """The matrix as a vector (B, n) where no square joins two coordinates, else None."""
+        s = self.squares
+        if not s.uncoupled:
+            return None
+        out = np.zeros((len(self.a), s.size))
+        add_at(out, s.entry_column, self.a[:, s.weight[s.entry_row]] * self.a[:, s.entry] ** 2)
+        return out
+
     def strains(self, shapes: Array) -> Array:
         """``R Φ``, shape (B, T, r)."""
-        if len(self.a) == 1:
+        if len(self.a) == 1 and "rows" not in self.__dict__:
             return np.asarray(self.sparse_rows() @ shapes[0])[None]
         return np.asarray(self.rows @ shapes)
 

@@ -18,7 +18,7 @@ from __future__ import annotations
 import numpy as np
 import scipy.sparse as sp
 
-from inverse.assembly.terms import Array
+from inverse.assembly.terms import Array, add_at
 from inverse.errors import ModelError
 from inverse.matrices.equilibrium import RestSlopes
 from inverse.matrices.stack import Matrices, Stack
@@ -80,11 +80,11 @@ def _cross_forms(matrices: Matrices, stack: Stack, modes: ModalSolution, j: int)
     squares, shapes = stack.squares, modes.shapes[0]
     E, w = stack.strains(modes.shapes)[0], stack.weights[0]
     out = np.zeros((1, shapes.shape[1], len(matrices.model.monomials)))
-    np.add.at(out[0], (slice(None), squares.weight), (E * E[:, [j]]).T)
+    add_at(out, squares.weight, (E * E[:, [j]]).T[None])
     varying = stack.varying
     row, column = squares.entry_row[varying], squares.entry_column[varying]
     slope = w[row, None] * (E[row] * shapes[column, j, None] + E[row, j, None] * shapes[column])
-    np.add.at(out[0], (slice(None), squares.entry[varying]), slope.T)
+    add_at(out, squares.entry[varying], slope.T[None])
     return to_dimensions(matrices, out)[0]
 
 

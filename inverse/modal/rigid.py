@@ -92,7 +92,7 @@ def _nullity_of_pairs(rows: sp.csr_array) -> int:
         parent = int(before[node])
         step = gain[parent, node] if (parent, node) in gain else 1.0 / gain[node, parent]
         motion[node] = motion[parent] * step
-    return int(np.all(np.abs(rows @ motion) <= RANK_TOLERANCE * np.abs(rows) @ np.abs(motion)))
+    return int(np.all(np.abs(rows @ motion) <= RANK_TOLERANCE * (abs(rows) @ np.abs(motion))))
 
 
 def _nullity_by_shift(rows: sp.csr_array) -> int:

@@ -25,7 +25,7 @@ import numpy as np
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
 
-from inverse.assembly.terms import Array, IntArray
+from inverse.assembly.terms import Array, IntArray, add_at
 from inverse.errors import ModelError
 from inverse.matrices.equilibrium import RestSlopes
 from inverse.matrices.stack import Matrices, Stack
@@ -48,9 +48,7 @@ def pull_eigenvalues(matrices: Matrices, modes: ModalSolution, cotangent: Array,
     _pull_diagonal(matrices.mass, modes.shapes, -cotangent * np.nan_to_num(modes.eigenvalues)[:, None], out)
 
 
-def _pull_diagonal(
-    stack: Stack, shapes: Array, cotangent: Array, out: Array, chosen: IntArray | None = None
-) -> None:
+def _pull_diagonal(stack: Stack, shapes: Array, cotangent: Array, out: Array, chosen: IntArray | None = None) -> None:
     """``Σ_j γ_j d(φ_jᵀ S φ_j)`` over the squares (or the chosen ones) of one stack, ``φ`` held."""
     used = _used(cotangent)
     shapes, cotangent = shapes[:, :, used], cotangent[:, :, used]
@@ -61,12 +59,12 @@ def _pull_diagonal(
         outside = np.ones(len(squares), bool)
         outside[chosen] = False
         by_weight[:, :, outside] = 0.0
-    _scatter(out, squares.weight, by_weight)
+    add_at(out, squares.weight, by_weight)
     varying = _varying(stack, chosen)
     if len(varying):
         row, column = squares.entry_row[varying], squares.entry_column[varying]
         slope = 2 * stack.weights[:, row, None] * E[:, row] * shapes[:, column]
-        _scatter(out, squares.entry[varying], cotangent @ np.swapaxes(slope, 1, 2))
+        add_at(out, squares.entry[varying], cotangent @ np.swapaxes(slope, 1, 2))
 
 
 def pull_form(stack: Stack, shapes: Array, form: Array, out: Array, chosen: IntArray | None = None) -> None:
@@ -90,17 +88,15 @@ def pull_form(stack: Stack, shapes: Array, form: Array, out: Array, chosen: IntA
         outside = np.ones(len(squares), bool)
         outside[chosen] = False
         by_weight[:, :, outside] = 0.0
-    _scatter(out, squares.weight, by_weight)
+    add_at(out, squares.weight, by_weight)
     varying = _varying(stack, chosen)
     if len(varying):
         row, column = squares.entry_row[varying], squares.entry_column[varying]
         slope = np.einsum("bkes,bes->bke", EG[:, :, row], shapes[:, column])
-        _scatter(out, squares.entry[varying], 2 * stack.weights[:, None, row] * slope)
+        add_at(out, squares.entry[varying], 2 * stack.weights[:, None, row] * slope)
 
 
-def pull_owned(
-    matrices: Matrices, modes: ModalSolution, chosen: IntArray, cotangent: Array, out: Array
-) -> Array:
+def pull_owned(matrices: Matrices, modes: ModalSolution, chosen: IntArray, cotangent: Array, out: Array) -> Array:
     """Derivatives of ``φ_jᵀ M_b φ_j``: its own part into `out`, what passes through ``φ`` returned, (B, k, n, r)."""
     _pull_diagonal(matrices.mass, modes.shapes, cotangent, out, chosen)
     mass = matrices.mass
@@ -109,9 +105,7 @@ def pull_owned(
     return np.asarray(through[:, None] * cotangent[:, :, None, :])
 
 
-def pull_shapes(
-    matrices: Matrices, modes: ModalSolution, cotangent: Array, out: Array
-) -> None:
+def pull_shapes(matrices: Matrices, modes: ModalSolution, cotangent: Array, out: Array) -> None:
     """Add derivatives that pass through the mode shapes, (B, k, n, r), to `out` (B, k, N)."""
     if modes.complete:
         stiffness, mass = shape_forms(modes, cotangent)
@@ -137,9 +131,7 @@ def shape_forms(modes: ModalSolution, cotangent: Array) -> tuple[Array, Array]:
     return stiffness, mass
 
 
-def _pull_shape_bordered(
-    matrices: Matrices, modes: ModalSolution, j: int, cotangent: Array, out: Array
-) -> None:
+def _pull_shape_bordered(matrices: Matrices, modes: ModalSolution, j: int, cotangent: Array, out: Array) -> None:
     """One shape of a large model: the adjoint of Nelson's bordered system, solved sparse.
 
     With ``[[K − λM, Mφ_c], [φ_cᵀM, 0]]`` bordered by the whole cluster of the mode, ``dφ_j`` is the solution for
@@ -174,11 +166,6 @@ def _varying(stack: Stack, chosen: IntArray | None) -> IntArray:
     return varying if chosen is None else varying[np.isin(stack.squares.entry_row[varying], chosen)]
 
 
-def _scatter(out: Array, places: IntArray, values: Array) -> None:
-    """``out[..., places] += values`` with repeated places."""
-    np.add.at(out, (slice(None), slice(None), places), values)
-
-
 def to_dimensions(matrices: Matrices, by_monomial: Array, by_dimension: Array | None = None) -> Array:
     """From derivatives over monomials (B, k, N) to base dimensions (B, k, D), in local coordinates.
 
@@ -190,9 +177,7 @@ def to_dimensions(matrices: Matrices, by_monomial: Array, by_dimension: Array | 
     return RestSlopes(matrices.model, matrices.point).pull(total)
 
 
-def directional_derivatives(
-    matrices: Matrices, modes: ModalSolution, j: int, directions: Array
-) -> Array:
+def directional_derivatives(matrices: Matrices, modes: ModalSolution, j: int, directions: Array) -> Array:
     """Derivatives of all eigenvalues of the cluster of mode ``j`` along some directions, ascending.
 
     For a repeated eigenvalue these are the eigenvalues of ``Φ_cᵀ(K' − λM')Φ_c``; for a simple one the derivative.

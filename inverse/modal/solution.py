@@ -31,7 +31,7 @@ from numpy.typing import NDArray
 
 from inverse.assembly.terms import Array
 from inverse.errors import ModelError
-from inverse.matrices.stack import Matrices
+from inverse.matrices.stack import Matrices, Stack
 from inverse.modal.rigid import count_rigid
 
 REFINED_SPREAD = 1e3
@@ -74,7 +74,8 @@ class ModalSolution:
     @property
     def complete(self) -> bool:
         """Whether all modes are there."""
-        return self.shapes.shape[1] == self.shapes.shape[2]
+        n, r = self.shapes.shape[1:]
+        return bool(n == r)
 
     @property
     def frequencies(self) -> Array:
@@ -120,12 +121,12 @@ def _refuse_massless(matrices: Matrices) -> None:
 
 
 def _solve_dense(matrices: Matrices, rigid: int) -> ModalSolution:
-    K, M = matrices.stiffness.matrix(), matrices.mass.matrix()
-    lost = ~(np.isfinite(K).all((1, 2)) & np.isfinite(M).all((1, 2)))
+    K = matrices.stiffness.matrix()
     with np.errstate(invalid="ignore", divide="ignore"):
-        back, whole = _whitening(M, lost)
-    lost = lost | ~whole
-    K[lost], back[lost] = np.eye(K.shape[1]), np.eye(K.shape[1]) if back.ndim == 3 else 1.0
+        back, sound = _whitening(matrices.mass)
+    lost = ~(np.isfinite(K).all((1, 2)) & sound)
+    if lost.any():
+        K[lost], back[lost] = np.eye(K.shape[1]), np.eye(K.shape[1]) if back.ndim == 3 else 1.0
     A = back[:, :, None] * K * back[:, None, :] if back.ndim == 2 else np.swapaxes(back, 1, 2) @ K @ back
     values, vectors = np.linalg.eigh(A)
     shapes = back[:, :, None] * vectors if back.ndim == 2 else back @ vectors
@@ -135,23 +136,23 @@ def _solve_dense(matrices: Matrices, rigid: int) -> ModalSolution:
     return ModalSolution(values, np.asarray(shapes), rigid, stable)
 
 
-def _whitening(M: Array, lost: NDArray[np.bool_]) -> tuple[Array, NDArray[np.bool_]]:
-    """``L⁻ᵀ`` of each mass matrix, as a vector (B, n) where all are diagonal; and which exist."""
-    n = M.shape[1]
-    diagonal = np.einsum("bii->bi", M)
-    whole = ~lost & (diagonal > 0).all(1)
-    if np.count_nonzero(M[~lost]) == np.count_nonzero(diagonal[~lost]):
-        return 1 / np.sqrt(diagonal), whole
-    scale = np.sqrt(np.where(whole[:, None], diagonal, 1.0))
-    scaled = np.where(whole[:, None, None], M / (scale[:, :, None] * scale[:, None, :]), np.eye(n))
+def _whitening(mass: Stack) -> tuple[Array, NDArray[np.bool_]]:
+    """``L⁻ᵀ`` of each mass matrix, as a vector (B, n) where it is diagonal; and which are positive definite."""
+    if (diagonal := mass.diagonal()) is not None:
+        return 1 / np.sqrt(diagonal), np.isfinite(diagonal).all(1) & (diagonal > 0).all(1)
+    M = mass.matrix()
+    n, diagonal = M.shape[1], np.einsum("bii->bi", M)
+    sound: NDArray[np.bool_] = np.isfinite(M).all((1, 2)) & (diagonal > 0).all(1)
+    scale = np.sqrt(np.where(sound[:, None], diagonal, 1.0))
+    scaled = np.where(sound[:, None, None], M / (scale[:, :, None] * scale[:, None, :]), np.eye(n))
     try:
         L = np.linalg.cholesky(scaled)
     except np.linalg.LinAlgError:
         for b in range(len(M)):
             if np.linalg.eigvalsh(scaled[b])[0] <= n * np.finfo(float).eps:
-                whole[b], scaled[b] = False, np.eye(n)
+                sound[b], scaled[b] = False, np.eye(n)
         L = np.linalg.cholesky(scaled)
-    return np.swapaxes(np.linalg.inv(L), 1, 2) / scale[:, :, None], whole
+    return np.swapaxes(np.linalg.inv(L), 1, 2) / scale[:, :, None], sound
 
 
 def _ordered(values: Array, rigid: int) -> tuple[Array, NDArray[np.bool_]]:
@@ -168,9 +169,7 @@ def _ordered(values: Array, rigid: int) -> tuple[Array, NDArray[np.bool_]]:
     return values, stable
 
 
-def _refine(
-    matrices: Matrices, values: Array, shapes: Array, rigid: int, stable: NDArray[np.bool_]
-) -> None:
+def _refine(matrices: Matrices, values: Array, shapes: Array, rigid: int, stable: NDArray[np.bool_]) -> None:
     """Bring eigenvalues to the accuracy of the squares where the spread asks for it, in place."""
     if values.shape[1] <= rigid:
         return
@@ -190,8 +189,8 @@ def _refine(
 def _solve_factored(matrices: Matrices, b: int, rigid: int) -> tuple[Array, Array, bool] | None:
     """Modes of one build from singular values; None where the mass matrix has no factor."""
     R, w = matrices.stiffness.rows[b], matrices.stiffness.weights[b]
-    back, whole = _whitening(matrices.mass.matrix()[[b]], np.zeros(1, bool))
-    if not whole[0]:
+    back, sound = _whitening(matrices.mass.only(b))
+    if not sound[0]:
         return None
     back = np.diag(back[0]) if back.ndim == 2 else back[0]
     up, down = w > 0, w < 0
@@ -213,9 +212,7 @@ def _singular(A: Array) -> tuple[Array, Array]:
     return np.asarray(s * work[0] / work[1])[::-1].copy(), np.asarray(V)[:, ::-1].copy()
 
 
-def _with_negative(
-    omega: Array, V: Array, N: Array, rigid: int, back: Array
-) -> tuple[Array, Array, bool] | None:
+def _with_negative(omega: Array, V: Array, N: Array, rigid: int, back: Array) -> tuple[Array, Array, bool] | None:
     """Take negative squares off: ``diag(ω²) − NᵀN = Ω(I − Ω⁻¹NᵀNΩ⁻¹)Ω``, again a product of factors."""
     N = N.copy()
     N[:, :rigid] = 0.0
@@ -284,9 +281,7 @@ def _lanczos(A: sp.csc_array, B: sp.csc_array | None, sigma: float, count: int) 
 
 def _factor(matrix: sp.csc_array) -> spla.SuperLU:
     """Symmetric sparse factors with pivots on the diagonal."""
-    return spla.splu(
-        matrix, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True}
-    )
+    return spla.splu(matrix, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
 
 
 def negative_pivots(matrix: sp.csc_array) -> int:

@@ -74,9 +74,7 @@ def _modes(evaluation: Evaluation) -> list[Mode]:
         column = motion[:, j] / motion[np.argmax(np.abs(motion[:, j])), j]
         shown = dict(zip(names, column, strict=True))
         shape = {
-            body: tuple(float(shown[c]) for c in sorted(own, key=_axis))
-            for body, own in model.bodies.items()
-            if own
+            body: tuple(float(shown[c]) for c in sorted(own, key=_axis)) for body, own in model.bodies.items() if own
         }
         frequency = float(np.sqrt(modes.eigenvalues[0, j]) / (2 * np.pi))
         records.append(Mode(number=j - modes.rigid + 1, frequency_hz=frequency, damping_ratio=None, shape=shape))

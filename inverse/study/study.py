@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 import scipy
+from inverse.study.content import SolveSettings, StudyContent
 
 from inverse.assembly.assembly import Assembly, Model
 from inverse.assembly.parameters import Variable
@@ -24,7 +25,6 @@ from inverse.design.shortfall import Shortfall, explain
 from inverse.design.verification import Verification, verify
 from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluation, Evaluator
-from inverse.study.content import SolveSettings, StudyContent
 from inverse.study.describe import describe, evaluated
 from objectives.base import Objective
 
@@ -143,9 +143,7 @@ class Study:
             )
         return self._sized(problem, outcome, began, seed, progress)
 
-    def _sized(
-        self, problem: Problem, outcome: Outcome, began: float, seed: int | None, progress: Progress
-    ) -> Result:
+    def _sized(self, problem: Problem, outcome: Outcome, began: float, seed: int | None, progress: Progress) -> Result:
         evaluation = evaluated(problem.evaluator, problem.designs(outcome.closest)[0])
         self._refuse_unstable(evaluation)
         record = describe(evaluation)
@@ -189,7 +187,9 @@ class Study:
             return
         modes = evaluation.state.modes
         if not np.isfinite(modes.eigenvalues[0]).all():
-            raise StudyError(f"{self.name}: the assembly has no rest position at this design, or a mass is not positive")
+            raise StudyError(
+                f"{self.name}: the assembly has no rest position at this design, or a mass is not positive"
+            )
         j = int(np.argmin(modes.eigenvalues[0]))
         rows = evaluation.state.matrices.component_rows(names := tuple(self.model.components))[0]
         worst = names[int(np.argmax(np.abs(rows @ modes.shapes[0, :, j])))]
@@ -201,7 +201,7 @@ class Study:
     def _refuse_route(self) -> None:
         if self.solve.route not in ("auto", "gradient"):
             raise StudyError(
-                f"{self.name}: solve.route = \"{self.solve.route}\" is not available in this version; use \"auto\" or \"gradient\""
+                f'{self.name}: solve.route = "{self.solve.route}" is not available in this version; use "auto" or "gradient"'
             )
 
     def _result(
@@ -244,9 +244,7 @@ def _verdict(record: Design) -> str:
     return "every objective is met" if judged else "no objective has a window or a limit to judge by"
 
 
-def _message(
-    record: Design, shortfall: Shortfall | None, verification: Verification, outcome: Outcome
-) -> str:
+def _message(record: Design, shortfall: Shortfall | None, verification: Verification, outcome: Outcome) -> str:
     if record.met and not verification.agrees:
         return "the second path does not confirm the design; it is not called met"
     if shortfall is None:

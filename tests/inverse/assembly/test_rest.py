@@ -70,9 +70,7 @@ def test_a_sag_is_weight_over_rate_and_static_rate_counts():
 
 def test_a_platform_on_its_edge_topples():
     body = Platform(name="tower", mass=100.0, inertia=(4.0,), centre=(0.0, 2.0))
-    feet = tuple(
-        Spring(name=f"f{x}", between=("tower", "ground"), at=x, rate=2000.0) for x in (-0.2, 0.2)
-    )
+    feet = tuple(Spring(name=f"f{x}", between=("tower", "ground"), at=x, rate=2000.0) for x in (-0.2, 0.2))
     modes = solve_modes(built(Assembly(bodies=(body,), links=feet).compile()))
     assert not modes.stable[0]
 
@@ -131,7 +129,8 @@ REFUSED = {
     ),
     "must be greater than zero": Assembly(bodies=(Mass(name="a", mass=0.0),)),
     "must run between two joints": Assembly(
-        bodies=(Mass(name="a", mass=1.0),), links=(Rod(name="r", between=("a", "ground"), area=1.0, modulus=1.0),)
+        bodies=(Mass(name="a", mass=1.0),),
+        links=(Rod(name="r", between=("a", "ground"), area=1.0, modulus=1.0),),
     ),
 }
 

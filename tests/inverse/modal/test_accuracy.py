@@ -16,7 +16,10 @@ def exact_eigenvalues(model_matrices) -> list[float]:
     with mp.workdps(60):
         K, M = (
             sum(
-                (mp.mpf(float(w)) * (row := mp.matrix(r.tolist())) * row.T for w, r in zip(s.weights[0], s.rows[0], strict=True)),
+                (
+                    mp.mpf(float(w)) * (row := mp.matrix(r.tolist())) * row.T
+                    for w, r in zip(s.weights[0], s.rows[0], strict=True)
+                ),
                 mp.zeros(s.squares.size),
             )
             for s in (model_matrices.stiffness, model_matrices.mass)

@@ -21,6 +21,7 @@ from inverse.modal.solution import solve_modes
 
 ASSEMBLIES = every_part()
 
+
 def eigenvalue_jacobian(matrices, modes) -> np.ndarray:
     r = modes.eigenvalues.shape[1]
     out = np.zeros((1, r, len(matrices.model.monomials)))

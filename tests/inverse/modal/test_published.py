@@ -103,7 +103,9 @@ def test_pendulums_in_series_swing_at_the_zeros_of_laguerre(n, zeros):
 def test_linear_molecule_stretch_ratio():
     """Ratio of the two stretching frequencies of CO₂, √(1 + 2·16/12) (exact; textbook of classical mechanics)."""
     assert_allclose(
-        np.divide(*omega(chain([16.0, 12.0, 16.0], [1.0, 1.0], first_held=False))[[2, 1]]), 1.9148542, rtol=1e-7
+        np.divide(*omega(chain([16.0, 12.0, 16.0], [1.0, 1.0], first_held=False))[[2, 1]]),
+        1.9148542,
+        rtol=1e-7,
     )
 
 
@@ -174,9 +176,7 @@ def test_tower_of_72_rods():
     areas += [12.045, 8.0401, 0.645, 0.645, 17.38, 8.0561, 0.645, 0.645]
     model = rod_tower(areas, 1e7 * psi, 0.1 * pound / inch**3, 5000 * pound).compile()
     matrices = built(model)
-    assert_allclose(
-        solve_modes(matrices).frequencies[0, :5], [4.0, 4.0, 6.0, 6.2468, 9.038], rtol=1e-3
-    )
+    assert_allclose(solve_modes(matrices).frequencies[0, :5], [4.0, 4.0, 6.0, 6.2468, 9.038], rtol=1e-3)
     weight = model.part_mass.values(matrices.a)[0].sum() - 4 * 5000 * pound
     assert_allclose(weight, 327.691, rtol=1e-5)
 
