@@ -38,6 +38,13 @@ class Displacement:
 
 
 @dataclass(frozen=True, slots=True)
+class FrozenDisplacement:
+    """`Displacement` with ``Φ`` held: only what reads it off the shapes changes, shape (B, r)."""
+
+    component: str
+
+
+@dataclass(frozen=True, slots=True)
 class Energy:
     """``φ_jᵀ M_b φ_j`` for the mass terms of one owner (``east``, or ``stage.ry``), shape (B, r)."""
 
@@ -113,6 +120,7 @@ class Changes:
 Quantity = (
     Eigenvalues
     | Displacement
+    | FrozenDisplacement
     | Energy
     | MassBlock
     | StiffnessForm

@@ -1,0 +1,228 @@
+"""Frequencies, periods, splittings, beat periods and frequency ratios."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar
+
+import numpy as np
+
+from objectives.base import AtLeast, AtMost, Objective, Pursuit, Target, nothing, pursue_measure, scaled
+from objectives.state import Array, Eigenvalues, IntArray, Measured, ModeReference, State
+
+TURN = 2 * np.pi
+
+NEIGHBOURS = 4
+"""Modes that a limit on one mode is pursued on: it and the next ones on the side it implies."""
+
+
+@dataclass(frozen=True, slots=True)
+class Tone:
+    """One frequency of each build: ``f`` and ``df/dλ`` (B,), and the mode it belongs to; NaN where there is none."""
+
+    f: Array
+    slope: Array
+    index: IntArray
+
+
+def tone(state: State, index: IntArray) -> Tone:
+    """The frequencies of the modes at some positions."""
+    values = state[Eigenvalues()]
+    there = (index >= 0) & (index < values.shape[1])
+    place = np.where(there, index, 0)
+    lam = values[np.arange(len(values)), place]
+    lam = np.where(there & (lam > 0), lam, np.nan)
+    f = np.sqrt(lam) / TURN
+    return Tone(f, np.nan_to_num(f / (2 * lam)), place)
+
+
+def measured(state: State, value: Array, *slopes: tuple[Tone, Array | float]) -> Measured:
+    """One column whose slope by each tone's frequency is given."""
+    gradient = np.zeros((state.builds, 1, state[Eigenvalues()].shape[1]))
+    rows = np.arange(state.builds)
+    for one, slope in slopes:
+        gradient[rows, 0, one.index] += np.nan_to_num(slope * one.slope)
+    return Measured(value[:, None], {Eigenvalues(): gradient})
+
+
+def logarithm(m: Measured, against: float) -> Measured:
+    """``log(value/against)``."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        values = np.log(m.values / against)
+        gradient = {q: np.nan_to_num(g / m.values[:, :, None]) for q, g in m.gradient.items()}
+    return Measured(values, gradient)
+
+
+def pursue_logarithm(objective: Objective, m: Measured) -> Pursuit:
+    """Residuals in the logarithm of a positive measure: starts may be far off, and near the target it is linear."""
+    none = nothing(len(m.values))
+    match objective.requirement:
+        case Target(value, within) if value > 0:
+            return Pursuit(scaled(logarithm(m, value), value / within), none)
+        case AtLeast(value) if value > 0:
+            return Pursuit(none, logarithm(m, value))
+        case AtMost(value) if value > 0:
+            return Pursuit(none, scaled(logarithm(m, value), -1.0))
+        case requirement:
+            return pursue_measure(requirement, m)
+
+
+def side_by_side(parts: list[Measured]) -> Measured:
+    """Several columns of one quantity's functions."""
+    quantity = Eigenvalues()
+    return Measured(
+        np.concatenate([m.values for m in parts], axis=1),
+        {quantity: np.concatenate([m.gradient[quantity] for m in parts], axis=1)},
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Frequency(Objective):
+    """``f_j = ω_j/2π``."""
+
+    kind: ClassVar[str] = "frequency"
+    unit: ClassVar[str] = "Hz"
+
+    mode: ModeReference
+
+    @property
+    def modes(self) -> tuple[ModeReference, ...]:
+        """The mode it names."""
+        return (self.mode,)
+
+    def measure(self, state: State) -> Measured:
+        """The frequency of the mode."""
+        one = tone(state, state.index(self.mode))
+        return measured(state, one.f, (one, 1.0))
+
+    def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
+        """In the logarithm; a limit is also put on the neighbours for which it is implied.
+
+        Mode j above a limit implies it for all following ones. Where two of them meet, single
+        frequencies have a kink, and a solver that sees only one of them runs into it.
+        """
+        pursuit = pursue_logarithm(self, self.measure(state))
+        if not isinstance(self.mode, int) or not isinstance(self.requirement, AtLeast | AtMost):
+            return pursuit
+        step = 1 if isinstance(self.requirement, AtLeast) else -1
+        count = state[Eigenvalues()].shape[1] - state.rigid
+        parts = [pursuit.positive]
+        for mode in range(self.mode + step, self.mode + step * NEIGHBOURS, step):
+            if 0 < mode <= count:
+                one = tone(state, state.index(mode))
+                parts.append(pursue_logarithm(self, measured(state, one.f, (one, 1.0))).positive)
+        return Pursuit(pursuit.equal, side_by_side(parts))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Period(Objective):
+    """``1/f_j``."""
+
+    kind: ClassVar[str] = "period"
+    unit: ClassVar[str] = "s"
+
+    mode: ModeReference
+
+    @property
+    def modes(self) -> tuple[ModeReference, ...]:
+        """The mode it names."""
+        return (self.mode,)
+
+    def measure(self, state: State) -> Measured:
+        """The period of the mode."""
+        one = tone(state, state.index(self.mode))
+        return measured(state, 1 / one.f, (one, -1 / one.f**2))
+
+    def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
+        """In the logarithm."""
+        return pursue_logarithm(self, self.measure(state))
+
+
+def splitting(state: State, between: tuple[ModeReference, ModeReference]) -> tuple[Array, Tone, Tone]:
+    """``f_j − f_i = (λ_j − λ_i)/(ω_i + ω_j)/2π``: no digits are lost where they are close."""
+    first, second = (tone(state, state.index(mode)) for mode in between)
+    values, rows = state[Eigenvalues()], np.arange(state.builds)
+    gap = values[rows, second.index] - values[rows, first.index]
+    return gap / (TURN**2 * (first.f + second.f)), first, second
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Splitting(Objective):
+    """``f_j − f_i``, signed for modes named by shape."""
+
+    kind: ClassVar[str] = "splitting"
+    unit: ClassVar[str] = "Hz"
+
+    between: tuple[ModeReference, ModeReference]
+
+    @property
+    def modes(self) -> tuple[ModeReference, ...]:
+        """Both modes."""
+        return self.between
+
+    def measure(self, state: State) -> Measured:
+        """The second frequency less the first."""
+        value, first, second = splitting(state, self.between)
+        return measured(state, value, (first, -1.0), (second, 1.0))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BeatPeriod(Objective):
+    """``1/(f_j − f_i)``, there and back once."""
+
+    kind: ClassVar[str] = "beat period"
+    unit: ClassVar[str] = "s"
+
+    between: tuple[ModeReference, ModeReference]
+
+    @property
+    def modes(self) -> tuple[ModeReference, ...]:
+        """Both modes."""
+        return self.between
+
+    def measure(self, state: State) -> Measured:
+        """The beat period; infinite where both frequencies agree."""
+        value, first, second = splitting(state, self.between)
+        with np.errstate(divide="ignore"):
+            T = 1 / value
+        slope = np.where(np.isfinite(T), T, 0.0) ** 2
+        return measured(state, T, (first, slope), (second, -slope))
+
+    def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
+        """In the splitting, which passes smoothly through zero where the period runs away."""
+        value, first, second = splitting(state, self.between)
+        m, none = measured(state, value, (first, -1.0), (second, 1.0)), nothing(state.builds)
+        match self.requirement:
+            case Target(T, within):
+                return Pursuit(scaled(m, T**2 / within, 1 / T), none)
+            case AtLeast(T):
+                return Pursuit(none, scaled(m, -T, 1 / T))
+            case AtMost(T):
+                return Pursuit(none, scaled(m, T, 1 / T))
+            case requirement:
+                return pursue_measure(requirement, m)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FrequencyRatio(Objective):
+    """``f_j/f_i``."""
+
+    kind: ClassVar[str] = "frequency ratio"
+    unit: ClassVar[str] = "1"
+
+    between: tuple[ModeReference, ModeReference]
+
+    @property
+    def modes(self) -> tuple[ModeReference, ...]:
+        """Both modes."""
+        return self.between
+
+    def measure(self, state: State) -> Measured:
+        """The second frequency over the first."""
+        first, second = (tone(state, state.index(mode)) for mode in self.between)
+        ratio = second.f / first.f
+        return measured(state, ratio, (first, -ratio / first.f), (second, 1 / first.f))
+
+    def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
+        """In the logarithm."""
+        return pursue_logarithm(self, self.measure(state))
