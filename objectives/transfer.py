@@ -83,7 +83,7 @@ class Exchange:
 
     def share(self, t: Array) -> tuple[Array, Array, Array]:
         """``s`` and its first and second time derivatives at instants (T,)."""
-        parts = [self._share(t[k : k + CHUNK]) for k in range(0, len(t), CHUNK)]
+        parts = [self._share(t[k : k + CHUNK]) for k in range(0, max(len(t), 1), CHUNK)]
         s, first, second = (np.concatenate(column) for column in zip(*parts, strict=True))
         return s, first, second
 
