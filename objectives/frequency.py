@@ -33,7 +33,7 @@ def tone(state: State, index: IntArray) -> Tone:
     lam = values[np.arange(len(values)), place]
     lam = np.where(there & (lam > 0), lam, np.nan)
     f = np.sqrt(lam) / TURN
-    return Tone(f, np.nan_to_num(f / (2 * lam)), place)
+    return Tone(f, f / (2 * lam), place)
 
 
 def measured(state: State, value: Array, *slopes: tuple[Tone, Array | float]) -> Measured:
@@ -41,7 +41,7 @@ def measured(state: State, value: Array, *slopes: tuple[Tone, Array | float]) ->
     gradient = np.zeros((state.builds, 1, state[Eigenvalues()].shape[1]))
     rows = np.arange(state.builds)
     for one, slope in slopes:
-        gradient[rows, 0, one.index] += np.nan_to_num(slope * one.slope)
+        gradient[rows, 0, one.index] += slope * one.slope
     return Measured(value[:, None], {Eigenvalues(): gradient})
 
 
@@ -49,7 +49,7 @@ def logarithm(m: Measured, against: float) -> Measured:
     """``log(value/against)``."""
     with np.errstate(divide="ignore", invalid="ignore"):
         values = np.log(m.values / against)
-        gradient = {q: np.nan_to_num(g / m.values[:, :, None]) for q, g in m.gradient.items()}
+        gradient = {q: g / m.values[:, :, None] for q, g in m.gradient.items()}
     return Measured(values, gradient)
 
 

@@ -178,7 +178,7 @@ class State(Protocol):
 
 
 Gradient = dict[Quantity, NDArray[Any]]
-"""Partial derivatives: for values of shape (B, k) an array (B, k, ...) per quantity."""
+"""Partial derivatives: for values of shape (B, k) an array (B, k, ...) per quantity; NaN counts as zero."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -127,26 +127,17 @@ class Evaluation:
             Shapes (B, k), (B, k, P), (B, l), (B, l, P), columns weighted by the objectives' weights.
         """
         chosen = choices or {}
-        pursuits = [
-            objective.pursue(self.state, chosen.get(i)) for i, objective in enumerate(self.evaluator.objectives)
-        ]
-        weights = [objective.weight for objective in self.evaluator.objectives]
-        return (
-            *self._stacked([p.equal for p in pursuits], weights),
-            *self._stacked([p.positive for p in pursuits], weights),
-        )
-
-    def _stacked(self, parts: Sequence[Measured], weights: Sequence[float]) -> tuple[Array, Array]:
-        values = np.concatenate(
-            [np.empty((self.state.builds, 0)), *(w * p.values for w, p in zip(weights, parts, strict=True))],
-            axis=1,
-        )
-        slopes = self._over_variables(parts)
-        columns = np.concatenate(
-            [np.empty(0), *(np.full(p.values.shape[1], w) for w, p in zip(weights, parts, strict=True))]
-        )
+        objectives = self.evaluator.objectives
+        pursuits = [objective.pursue(self.state, chosen.get(i)) for i, objective in enumerate(objectives)]
+        equal, positive = [p.equal for p in pursuits], [p.positive for p in pursuits]
+        weights = np.array([o.weight for part in (equal, positive) for o, m in zip(objectives, part, strict=True)
+                            for _ in range(m.values.shape[1])])  # fmt: skip
+        none = np.empty((self.state.builds, 0))
+        values = weights * np.concatenate([none, *(m.values for m in (*equal, *positive))], axis=1)
         values[~self.state.modes.stable] = np.nan
-        return values, slopes * columns[:, None]
+        slopes = weights[:, None] * self._over_variables([*equal, *positive])
+        k = sum(m.values.shape[1] for m in equal)
+        return values[:, :k], slopes[:, :k], values[:, k:], slopes[:, k:]
 
     def _over_variables(self, parts: Sequence[Measured]) -> Array:
         k = sum(part.values.shape[1] for part in parts)

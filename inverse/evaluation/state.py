@@ -225,23 +225,22 @@ class Slopes:
         self.by_monomial = np.zeros((builds, k, len(model.monomials)))
         self.by_dimension = np.zeros((builds, k, len(model.names)))
         self.by_change: Array | None = None
+        self.by_eigenvalue: Array | None = None
         self.by_shape: Array | None = None
 
     def add(self, gradient: Gradient, first: int = 0) -> None:
         """Add the gradient of values ``first, first + 1, …``."""
         for quantity, cotangent in gradient.items():
-            self._add(
-                quantity,
-                np.nan_to_num(np.asarray(cotangent, float)),
-                slice(first, first + cotangent.shape[1]),
-            )
+            self._add(quantity, cotangent, slice(first, first + cotangent.shape[1]))
 
     def _add(self, quantity: Quantity, cotangent: Array, at: slice) -> None:
         state, matrices, modes = self.state, self.state.matrices, self.state.modes
         out = self.by_monomial[:, at]
         match quantity:
             case Eigenvalues():
-                pull_eigenvalues(matrices, modes, cotangent, out)
+                if self.by_eigenvalue is None:
+                    self.by_eigenvalue = np.zeros((state.builds, self.k, cotangent.shape[2]))
+                self.by_eigenvalue[:, at] += cotangent
             case Displacement(component):
                 rows = state._rows((component,))
                 self._through_shapes(at, rows[:, :, :, None] * cotangent[:, :, None, :])
@@ -309,7 +308,10 @@ class Slopes:
     def over_dimensions(self) -> Array:
         """Derivatives over base dimensions in local coordinates, shape (B, k, D)."""
         matrices = self.state.matrices
+        if self.by_eigenvalue is not None:
+            pull_eigenvalues(matrices, self.state.modes, np.nan_to_num(self.by_eigenvalue), self.by_monomial)
+            self.by_eigenvalue = None
         if self.by_shape is not None:
-            pull_shapes(matrices, self.state.modes, self.by_shape, self.by_monomial)
+            pull_shapes(matrices, self.state.modes, np.nan_to_num(self.by_shape), self.by_monomial)
             self.by_shape = None
-        return to_dimensions(matrices, self.by_monomial, self.by_dimension)
+        return to_dimensions(matrices, np.nan_to_num(self.by_monomial), self.by_dimension)
