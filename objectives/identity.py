@@ -42,7 +42,7 @@ def assurance(like: Like, state: State) -> Array:
     size = np.einsum("bsj,bst,btj->bj", U, W, U)
     with np.errstate(divide="ignore", invalid="ignore"):
         value = along**2 / ((Wa @ a)[:, None] * size)
-    return np.nan_to_num(value)
+    return np.asarray(np.nan_to_num(value))
 
 
 def identify(likes: Sequence[Like], state: State) -> Identification:

@@ -87,7 +87,7 @@ class KeepOut(Objective):
         middles = np.array([(low + high) / 2 for low, high in self.bands])
         f = self._frequencies(state)
         with np.errstate(invalid="ignore"):
-            return np.sum(f[:, :, None] < middles, axis=1, dtype=np.intp)
+            return np.asarray(np.sum(f[:, :, None] < middles, axis=1, dtype=np.intp))
 
     def _frequencies(self, state: State) -> Array:
         """Frequencies of the oscillating modes that count, others NaN, shape (B, r)."""

@@ -118,7 +118,7 @@ class NodalPoint(Objective):
 
 
 def _length(state: State, components: tuple[str, ...], index: IntArray) -> Array:
-    return np.linalg.norm([at_mode(state[Displacement(c)], index) for c in components], axis=0)
+    return np.asarray(np.linalg.norm([at_mode(state[Displacement(c)], index) for c in components], axis=0))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

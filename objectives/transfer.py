@@ -159,7 +159,7 @@ def exchanges(state: State, source: str, target: str) -> list[Exchange | None]:
     """The exchange of every build; None for a build without modes."""
     lam = state[Eigenvalues()]
     c, S = state[ReleasedAmplitudes(source)], state[OwnerForm(target)]
-    sound = np.isfinite(lam).all(axis=1) & (lam >= 0).all(axis=1)
+    sound = np.asarray(np.isfinite(lam).all(axis=1) & (lam >= 0).all(axis=1))
     return [Exchange(np.sqrt(lam[b]), c[b], S[b]) if sound[b] else None for b in range(state.builds)]
 
 

@@ -112,7 +112,8 @@ class Monomials:
     @cached_property
     def constant(self) -> NDArray[np.bool_]:
         """Which are plain numbers, shape (N,)."""
-        constant = np.asarray(abs(self.exponents).sum(axis=1)).ravel() == 0
+        named = sp.csr_array(self.exponents)
+        constant = np.diff(named.indptr) == 0
         constant[self.mixed] = False
         return np.asarray(constant)
 

@@ -15,7 +15,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from inverse.design.population import PopulationResult, solve_population
+from inverse.design.population import PopulationResult, Stop, solve_population
 from objectives.keep_out import KeepOut
 
 from inverse.assembly.terms import Array, IntArray
@@ -41,6 +41,8 @@ SAMPLES = 64
 
 MOST_CHOICES = 12
 """Ways of passing keep-out bands that are tried one by one after the nearest."""
+
+NOWHERE_STABLE = "every design tried topples: none rests in stable equilibrium"
 
 Progress = Callable[[str], None]
 
@@ -76,7 +78,10 @@ def solve_by_gradient(
     for attempt in _attempts(problem, rng):
         progress(attempt.words)
         found = attempt.run(problem, rng, starts, 1 + alternatives)
-        stopped = found.stopped_because.value
+        stopped = found.stopped_because.value.rstrip('.').lower()
+        if found.stopped_because is Stop.INFEASIBLE:
+            middle = (problem.lower + problem.upper) / 2
+            return Outcome(np.empty((0, len(middle))), middle, NOWHERE_STABLE)
         designs = _met(problem, np.vstack([found.solutions, found.best[None]]))
         if len(designs):
             designs = _improved(problem, designs, progress) if problem.wishes else designs

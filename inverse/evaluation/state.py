@@ -119,7 +119,7 @@ class BuildState:
             case Energy(owner):
                 chosen = matrices.owned(owner)
                 E = matrices.mass.strains(modes.shapes)[:, chosen]
-                return np.einsum("bt,btj->bj", matrices.mass.weights[:, chosen], E**2)
+                return np.asarray(np.einsum("bt,btj->bj", matrices.mass.weights[:, chosen], E**2))
             case MassBlock(components):
                 selection = self._selection(components)
                 E = matrices.mass.rows @ selection

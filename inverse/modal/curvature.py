@@ -85,7 +85,7 @@ def _cross_forms(matrices: Matrices, stack: Stack, modes: ModalSolution, j: int)
     row, column = squares.entry_row[varying], squares.entry_column[varying]
     slope = w[row, None] * (E[row] * shapes[column, j, None] + E[row, j, None] * shapes[column])
     add_at(out, squares.entry[varying], slope.T[None])
-    return to_dimensions(matrices, out)[0]
+    return np.asarray(to_dimensions(matrices, out)[0])
 
 
 def _quadratic(stack: Stack, shape: Array, monomials: int) -> tuple[Array, sp.csr_array]:

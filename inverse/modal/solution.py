@@ -139,7 +139,7 @@ def _solve_dense(matrices: Matrices, rigid: int) -> ModalSolution:
 def _whitening(mass: Stack) -> tuple[Array, NDArray[np.bool_]]:
     """``L⁻ᵀ`` of each mass matrix, as a vector (B, n) where it is diagonal; and which are positive definite."""
     if (diagonal := mass.diagonal()) is not None:
-        return 1 / np.sqrt(diagonal), np.isfinite(diagonal).all(1) & (diagonal > 0).all(1)
+        return 1 / np.sqrt(diagonal), np.asarray(np.isfinite(diagonal).all(1) & (diagonal > 0).all(1))
     M = mass.matrix()
     n, diagonal = M.shape[1], np.einsum("bii->bi", M)
     sound: NDArray[np.bool_] = np.isfinite(M).all((1, 2)) & (diagonal > 0).all(1)

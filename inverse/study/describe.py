@@ -71,6 +71,8 @@ def _modes(evaluation: Evaluation) -> list[Mode]:
     motion = (state.matrices.component_rows(names) @ modes.shapes)[0]
     records = []
     for j in range(modes.rigid, modes.eigenvalues.shape[1]):
+        if not modes.eigenvalues[0, j] > 0:
+            continue
         column = motion[:, j] / motion[np.argmax(np.abs(motion[:, j])), j]
         shown = dict(zip(names, column, strict=True))
         shape = {

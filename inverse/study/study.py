@@ -145,15 +145,18 @@ class Study:
 
     def _sized(self, problem: Problem, outcome: Outcome, began: float, seed: int | None, progress: Progress) -> Result:
         evaluation = evaluated(problem.evaluator, problem.designs(outcome.closest)[0])
-        self._refuse_unstable(evaluation)
+        if not len(problem.free):
+            self._refuse_unstable(evaluation)
         record = describe(evaluation)
-        progress("checking by a second path")
-        verification = verify(evaluation)
-        shortfall = None
-        if not record.met and len(problem.free):
-            progress("looking for what would help")
-            shortfall = explain(problem, outcome.closest, self._seed(seed))
-        status = Status.MET if record.met and verification.agrees else Status.NOT_MET
+        verification, shortfall = None, None
+        if evaluation.state.modes.stable[0]:
+            progress("checking by a second path")
+            verification = verify(evaluation)
+            if not record.met and len(problem.free):
+                progress("looking for what would help")
+                shortfall = explain(problem, outcome.closest, self._seed(seed))
+        confirmed = verification is not None and verification.agrees
+        status = Status.MET if record.met and confirmed else Status.NOT_MET
         others = [describe(evaluated(problem.evaluator, problem.designs(t)[0])) for t in outcome.designs[1:]]
         return self._result(
             "size",
@@ -244,7 +247,9 @@ def _verdict(record: Design) -> str:
     return "every objective is met" if judged else "no objective has a window or a limit to judge by"
 
 
-def _message(record: Design, shortfall: Shortfall | None, verification: Verification, outcome: Outcome) -> str:
+def _message(record: Design, shortfall: Shortfall | None, verification: Verification | None, outcome: Outcome) -> str:
+    if verification is None:
+        return outcome.stopped
     if record.met and not verification.agrees:
         return "the second path does not confirm the design; it is not called met"
     if shortfall is None:

@@ -1,0 +1,1 @@
+"""Choosing the dimensions: the routes from wanted behaviour to a design."""

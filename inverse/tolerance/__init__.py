@@ -1,0 +1,1 @@
+"""What the shop does to a design: errors of parts, and the share of builds that still do what was asked."""
