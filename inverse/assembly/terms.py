@@ -34,8 +34,11 @@ def add_at(out: Array, places: IntArray, values: Array) -> None:
     """``out[..., places] += values``, counting places as often as they occur."""
     if np.bincount(places, minlength=1).max() <= 1:
         out[..., places] += values
-    else:
-        np.add.at(out.T, places, values.T)
+        return
+    # Counting with weights is several times faster than numpy.add.at.
+    rows, n = out.size // out.shape[-1], out.shape[-1]
+    flat = (np.arange(rows)[:, None] * n + places).ravel()
+    out += np.bincount(flat, np.broadcast_to(values, (*out.shape[:-1], len(places))).ravel(), rows * n).reshape(out.shape)
 
 
 @dataclass(frozen=True)

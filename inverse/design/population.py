@@ -31,8 +31,8 @@ import numpy as np
 
 from inverse.design.levenberg_marquardt import Array, Runs, advance, begin
 
-# Chosen by the number of evaluations to a solution on chains, trees and rings of 30 and 40 bodies
-# (tests/benchmarks/problems.py); within a factor of two the count hardly depends on any of them.
+# Chosen by the evaluations it took to solve chains, trees and rings of 30 and 40 bodies
+# (tests/benchmarks/problems.py). The largest effect is that of `LITTLE`: runs that are left early.
 EARLY_LANES = 8  # runs advanced together after the first has failed, until so many have ended
 LANES = 32  # after that
 ARCHIVE = 48  # end points kept
@@ -42,7 +42,7 @@ SLOW_STEPS = 2  # so many in a row end a run
 TRIAL = 10  # steps after which a lineage must be within the archive's costs
 LIFE = 100  # steps after which any run ends
 PATIENCE = 50  # runs without improvement before a new generation, times the number of variables
-BATCH_BYTES = 256e6  # of all Jacobian matrices held at one time
+BATCH_BYTES = 256e6  # of the Jacobian matrices of a batch; a step holds about five times that
 GENERATIONS = 3  # that must end at the least cost for it to be believed
 SAME_POINT = 1e-2  # archive points are at least so far apart, in shares of the ranges
 SAME_COST = 1e-3  # relative, between costs of what counts as one stationary point

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import scipy.sparse as sp
@@ -92,6 +93,7 @@ class RestSlopes:
     model: Model
     point: Point
 
+    @cached_property
     def _by_dimension(self) -> Array:
         """``∂G/∂(z, y)``, shape (B, S, D + S); the batch is small or the model is."""
         dependents = self.model.dependents
@@ -114,7 +116,7 @@ class RestSlopes:
         """``G_y⁻¹ right`` for rows ``right`` (B, k, S)."""
         first = len(self.point.positive) - len(self.model.dependents)
         if len(self.model.dependents) <= DENSE_DEPENDENTS:
-            G_y = self._by_dimension()[:, :, first:]
+            G_y = self._by_dimension[:, :, first:]
             return np.swapaxes(_dense_solve(G_y, np.swapaxes(right, 1, 2)), 1, 2)
         return np.stack([_sparse_solver(self._single(b)[:, first:])(right[b].T).T for b in range(len(right))])
 
@@ -122,7 +124,7 @@ class RestSlopes:
         """``G_y⁻ᵀ right`` for rows ``right`` (B, k, S)."""
         first = len(self.point.positive) - len(self.model.dependents)
         if len(self.model.dependents) <= DENSE_DEPENDENTS:
-            G_y = self._by_dimension()[:, :, first:]
+            G_y = self._by_dimension[:, :, first:]
             return np.swapaxes(_dense_solve(np.swapaxes(G_y, 1, 2), np.swapaxes(right, 1, 2)), 1, 2)
         return np.stack([_sparse_solver(self._single(b)[:, first:].T)(right[b].T).T for b in range(len(right))])
 
@@ -133,7 +135,7 @@ class RestSlopes:
         first = len(self.point.positive) - len(self.model.dependents)
         base, adjoint = cotangent[:, :, :first], self.solve_adjoint(cotangent[:, :, first:])
         if len(self.model.dependents) <= DENSE_DEPENDENTS:
-            return np.asarray(base - adjoint @ self._by_dimension()[:, :, :first])
+            return np.asarray(base - adjoint @ self._by_dimension[:, :, :first])
         return np.stack([base[b] - adjoint[b] @ self._single(b)[:, :first] for b in range(len(base))])
 
 

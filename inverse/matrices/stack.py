@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from inverse.assembly.assembly import Model
 from inverse.assembly.terms import Array, IntArray, Point, Squares, add_at
+from inverse.matrices.equilibrium import RestSlopes
 
 
 @dataclass(frozen=True)
@@ -89,6 +90,11 @@ class Matrices:
     def a(self) -> Array:
         """Values of the monomials, shape (B, N)."""
         return self.model.monomials.values(self.point)
+
+    @cached_property
+    def rest(self) -> RestSlopes:
+        """How dependent dimensions follow the base ones."""
+        return RestSlopes(self.model, self.point)
 
     @cached_property
     def mass(self) -> Stack:

@@ -20,7 +20,6 @@ import scipy.sparse as sp
 
 from inverse.assembly.terms import Array, add_at
 from inverse.errors import ModelError
-from inverse.matrices.equilibrium import RestSlopes
 from inverse.matrices.stack import Matrices, Stack
 from inverse.modal.sensitivity import clustered, to_dimensions
 from inverse.modal.solution import ModalSolution
@@ -116,7 +115,7 @@ def _through_dimensions(matrices: Matrices, by_monomial: Array, curvature: sp.cs
     base = len(model.parameters.dimensions)
     if not len(model.dependents):
         return np.asarray(second.toarray())
-    slopes = RestSlopes(model, point)
+    slopes = matrices.rest
     identity = np.eye(len(model.names))[None]
     T = slopes.pull(identity)[0]
     first = (J.T @ by_monomial)[base:]

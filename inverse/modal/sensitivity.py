@@ -27,7 +27,6 @@ import scipy.sparse.linalg as spla
 
 from inverse.assembly.terms import Array, IntArray, add_at
 from inverse.errors import ModelError
-from inverse.matrices.equilibrium import RestSlopes
 from inverse.matrices.stack import Matrices, Stack
 from inverse.modal.solution import ModalSolution
 
@@ -174,7 +173,7 @@ def to_dimensions(matrices: Matrices, by_monomial: Array, by_dimension: Array | 
     total = matrices.model.monomials.pull(matrices.point, matrices.a, by_monomial)
     if by_dimension is not None:
         total = total + by_dimension
-    return RestSlopes(matrices.model, matrices.point).pull(total)
+    return matrices.rest.pull(total)
 
 
 def directional_derivatives(matrices: Matrices, modes: ModalSolution, j: int, directions: Array) -> Array:

@@ -183,13 +183,16 @@ PART = Entry(_read_part_name, {"type": "string", "pattern": f"^{PART_NAME}$", "m
 REFERENCE = text("the name of a part")
 
 
-def read_variable_name(value: object, scope: Scope) -> str:
+def _read_variable_name(value: object, scope: Scope) -> str:
     """A name that can stand in a product."""
     expected = "a variable's name of letters, digits and _, beginning with a letter"
     name = _text(value, expected)
     if len(name) > 60 or not re.fullmatch(NAME_PATTERN, name):
         raise QuantityError(expected, found(name))
     return name
+
+
+VARIABLE_NAME = Entry(_read_variable_name, {"type": "string", "pattern": f"^{NAME_PATTERN}$", "maxLength": 60})
 
 
 def _read_yes(value: object, scope: Scope) -> bool:
@@ -462,12 +465,22 @@ PATTERNS = listed(text('a pattern, such as "*.length"'), 'patterns, such as ["*.
 NAMES = _distinct(listed(text("a name"), "names"), "names")
 LABELS = _distinct(listed(PART, "labels"), "labels")
 ENDS = _distinct(listed(REFERENCE, 'names, such as ["east", "west"] or ["east", "ground"]', 2), "two ends")
-DIRECTION = listed(quantity(Kind.RATIO, "any"), "pure numbers (x, z or x, y, z)", 2, 3)
+_NUMBERS = listed(quantity(Kind.RATIO, "any"), "pure numbers (x, z or x, y, z)", 2, 3)
 SIGNED_LENGTH = amount(Kind.LENGTH, "any")
 COORDINATES = one_or_listed(SIGNED_LENGTH, "coordinates", 1, 2, 3)
 POSITION = listed(SIGNED_LENGTH, "coordinates (x, z or x, y, z)", 2, 3)
 RATES = listed(amount(Kind.RATE), "rates (axial, lateral)", 2, 3)
 ORDERS = listed(quantity(Kind.RATIO), "orders, such as [1, 2]")
+
+
+def _read_direction(value: object, scope: Scope) -> tuple[float, ...]:
+    numbers: tuple[float, ...] = _NUMBERS.read(value, scope)
+    if not any(numbers):
+        raise QuantityError("a direction, such as [0, 1]", "nothing but zeros")
+    return numbers
+
+
+DIRECTION = Entry(_read_direction, _NUMBERS.json)
 
 
 def _read_inertia(value: object, scope: Scope) -> tuple[Amount, ...]:

@@ -37,7 +37,7 @@ class Parts:
             try:
                 stocks[name] = self._stock(name, table)
             except QuantityError as error:
-                self.names.problems.unread(f"stock.{name}", f"file {table.file}", error)
+                self.names.problems.unread(f"stock.{name}, {table.file}", "", error)
         return stocks
 
     def _stock(self, name: str, table: schema.Stock) -> Stock:

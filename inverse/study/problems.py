@@ -77,7 +77,7 @@ def _place(loc: tuple[Any, ...], raw: Mapping[str, Any]) -> tuple[str, str, tupl
     """Table and key of an error, and the (section, kind) whose keys are known there."""
     from inverse.study.schema import ARRAYS, KINDS
 
-    section, *rest = loc or ("",)
+    section, *rest = [part for part in loc if part != "[key]"] or [""]
     if section in ARRAYS and rest:
         table = raw[section][rest[0]]
         kind = str(rest[1]) if section in KINDS and len(rest) > 1 else ""

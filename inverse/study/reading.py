@@ -77,11 +77,11 @@ def _toml(text: str, problems: Problems) -> dict[str, Any]:
             raise ValueError("the text is too large")
         return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
-        problems.stop(f"expected TOML, found something else: {_one_line(error)}{_slip(text, str(error))}")
+        problems.stop(f"this is no TOML: {_one_line(error)}{_slip(text, str(error))}")
     except RecursionError:
-        problems.stop("expected TOML, found brackets nested beyond all use")
+        problems.stop("this is no TOML: brackets nested beyond all use")
     except ValueError as error:  # numbers of thousands of digits, dates that are none
-        problems.stop(f"expected TOML, found something else: {_one_line(error)}")
+        problems.stop(f"this is no TOML: {_one_line(error)}")
 
 
 def _one_line(error: Exception) -> str:

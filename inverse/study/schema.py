@@ -15,12 +15,13 @@ from inverse.assembly.parameters import Amount
 from inverse.errors import QuantityError
 from inverse.study import entries
 from inverse.study.entries import Known, Measure, ModeText, Scope, found, read_quantity, read_window, refusal
-from inverse.units import NAME_PATTERN, Kind, Product, Window
+from inverse.units import Kind, Product, Window
 from objectives.base import AtLeast, AtMost, Maximise, Minimise, Requirement, Target
 
 # ---------------------------------------------------------------- what keys take
 
 Name = Annotated[str, entries.PART]
+VariableName = Annotated[str, entries.VARIABLE_NAME]
 PartName = Annotated[str, entries.REFERENCE]
 Names = Annotated[tuple[str, ...], entries.NAMES]
 Patterns = Annotated[tuple[str, ...], entries.PATTERNS]
@@ -825,7 +826,7 @@ class StudyFile(Table):
 
     title: Words | None = about("of the study", None)
     gravity: Annotated[Amount, entries.GRAVITY] | None = about("an acceleration, or latitude and height", None)
-    variables: dict[str, Variable] = about("what may be chosen, by name", {})
+    variables: dict[VariableName, Variable] = about("what may be chosen, by name", {})
     stock: dict[str, Stock] = about("what can be ordered, by name", {})
     body: list[AnyBody] = about("bodies", [])
     link: list[AnyLink] = about("links between bodies, or a body and the ground", [])
@@ -837,15 +838,6 @@ class StudyFile(Table):
     cost: list[Prices] = about("prices", [])
     adjust: list[Adjust] = about("what can be adjusted when built", [])
     solve: Solve = about("how designs are looked for", Solve())
-
-    @model_validator(mode="after")
-    def _variable_names(self) -> Self:
-        for name in self.variables:
-            try:
-                entries.read_variable_name(name, Scope())
-            except QuantityError as error:
-                raise refusal(error, "variables") from None
-        return self
 
 
 # ---------------------------------------------------------------- doors
@@ -895,7 +887,6 @@ def scope_of(raw: Mapping[str, Any]) -> Scope:
 def json_schema() -> dict[str, Any]:
     """JSON Schema (draft 2020-12) of the study file, for editors and for checks before a run."""
     schema = _without_null(StudyFile.model_json_schema(by_alias=True))
-    schema["properties"]["variables"]["propertyNames"] = {"pattern": f"^{NAME_PATTERN}$"}
     head = {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "Study"}
     return head | {key: value for key, value in schema.items() if key != "title"}
 

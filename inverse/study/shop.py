@@ -152,6 +152,7 @@ class Shop:
             if over.units[name] != "m":
                 what = f"`{name}` in {over.units[name]}"
                 self.names.problems.add(where, "each", "lengths only with a published class", what)
+                break
         return given
 
     def conditions(self, over: Dimensions) -> tuple[Condition, ...]:
@@ -195,6 +196,7 @@ class Shop:
                 if over.units[name] not in (low.dimension.unit, low.dimension.without_angle.unit):
                     what = f"a range in {low.dimension.unit}"
                     self.names.problems.add(where, "range", f"{over.units[name]} for `{name}`", what)
+                    break
             adjustments.append(
                 Adjustment(
                     dimensions=names,

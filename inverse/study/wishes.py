@@ -90,9 +90,10 @@ class Wishes:
                 kind, (subject, rest) = NodalPoint, self._nodal_point(where, table)
             case schema.EnergyShare():
                 kind, subject = EnergyShare, f"{_mode_words(table.mode)} {table.body} {table.axis or ''}".strip()
-                owner = table.body if table.axis is None else f"{table.body}.{table.axis}"
                 self.names.check_axis(where, table.body, table.axis)
-                rest = {"mode": self._mode(where, table.mode), "owner": self.names.owner(where, "body", owner)}
+                whole = table.axis is None or len(self.names.components.get(table.body, ())) == 1
+                owner = table.body if whole else f"{table.body}.{table.axis}"
+                rest = {"mode": self._mode(where, table.mode), "owner": owner}
             case schema.Sag():
                 kind, subject, rest = StaticSag, str(table.body or table.link), {"sag": self._sag(where, table)}
             case schema.TotalMass():

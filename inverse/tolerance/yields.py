@@ -14,7 +14,7 @@ binomial", Biometrika 26(4), 1934, pp. 404-413.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -267,13 +267,21 @@ class Judge:
         if len(model.dependents):
             sound = np.flatnonzero(np.isfinite(point.values).all(axis=1))
             left, point = left[sound], chosen(point, sound)
-        for decide in (self._by_inertia, *(self._by_pair(pair) for pair in self.pairs), self._by_all_modes):
+        for decide in self._tests():
             if len(left):
                 passed = np.flatnonzero(decide(point))
                 left, point = left[passed], chosen(point, passed)
         verdicts = np.zeros(len(base), bool)
         verdicts[left] = True
         return verdicts
+
+    def _tests(self) -> Iterator[Callable[[Point], Verdicts]]:
+        """Cheapest first."""
+        if self.counted or self.stable_below is not None:
+            yield self._by_inertia
+        yield from (self._by_pair(pair) for pair in self.pairs)
+        if self.rest.objectives:
+            yield self._by_all_modes
 
     def _by_inertia(self, point: Point) -> Verdicts:
         shifts = sorted({_shift(f) for test in self.counted for f in (test.low, test.high) if 0 < f < np.inf})
@@ -332,8 +340,6 @@ class Judge:
 
     def _by_all_modes(self, point: Point) -> Verdicts:
         verdicts = np.ones(point.builds, bool)
-        if not self.rest.objectives:
-            return verdicts
         base = point.values[:, : len(self.nominal)]
         for builds in parts(np.arange(point.builds), dense_chunk(self.pencil.model)):
             x = np.broadcast_to(self.x, (len(builds), len(self.x)))

@@ -9,9 +9,9 @@ import time
 
 import numpy as np
 import pytest
+from benchmarks.problems import COUNTS, FAMILIES, Array, Problem, make_problem
 from scipy.optimize import least_squares
 
-from benchmarks.problems import COUNTS, FAMILIES, Array, Problem, make_problem
 from inverse.design.population import solve_population
 
 MET = 1e-9

@@ -52,8 +52,10 @@ def tree(bodies: int, seed: int = 0) -> Assembly:
 def lattice(side: int) -> Assembly:
     """A square grid of which one row is tied to the ground."""
     number = np.arange(side * side).reshape(side, side)
-    pairs = [*zip(number[:-1].flat, number[1:].flat), *zip(number[:, :-1].flat, number[:, 1:].flat)]
-    return tied([(int(a), int(b)) for a, b in pairs] + [(i, -1) for i in range(side)], side * side, 0)
+    first = np.concatenate([number[:-1].ravel(), number[:, :-1].ravel()])
+    second = np.concatenate([number[1:].ravel(), number[:, 1:].ravel()])
+    pairs = list(zip(first.tolist(), second.tolist(), strict=True))
+    return tied(pairs + [(i, -1) for i in range(side)], side * side, 0)
 
 
 def twins(bodies: int) -> Assembly:
@@ -96,26 +98,34 @@ def builds_of(model: Model, share: float, builds: int) -> tuple[Errors, Array]:
     return errors, draw_builds(errors, nominal(model)[0], points)
 
 
-def normalised(model: Model, base: Array) -> tuple[Array, Array, Array]:
-    """``K``, ``M`` and ``M^(-1/2) K M^(-1/2)`` of every build; ``M`` is diagonal."""
+def matrices_of(model: Model, base: Array) -> tuple[Array, Array]:
+    """``K`` and ``M`` of every build."""
     matrices = Matrices(model, Point(base, model.positive))
-    K, M = matrices.stiffness.matrix(), matrices.mass.matrix()
-    scale = 1 / np.sqrt(np.einsum("bii->bi", M))
-    return K, M, K * scale[:, :, None] * scale[:, None, :]
+    return matrices.stiffness.matrix(), matrices.mass.matrix()
+
+
+def normalised(model: Model, base: Array) -> Array:
+    """``M^(-1/2) K M^(-1/2)`` of every build; ``M`` is diagonal."""
+    out = np.empty((len(base), model.size, model.size))
+    for b in range(0, len(base), 1024):
+        K, M = matrices_of(model, base[b : b + 1024])
+        scale = 1 / np.sqrt(np.einsum("bii->bi", M))
+        out[b : b + 1024] = K * scale[:, :, None] * scale[:, None, :]
+    return out
 
 
 def dense_builds(bodies: int) -> int:
     """Builds whose dense matrices fit into some hundred megabytes."""
-    return 2**14 if bodies <= 25 else 2**12
+    return 2**14 if bodies <= 25 else 2**13
 
 
 def compared(benchmark, model: Model, base: Array, judge: Callable[[Array], Array]) -> tuple[float, Array]:
     """Rates over those of the references, and all eigenvalues."""
-    K, M, A = normalised(model, base)
+    A, (K, M) = normalised(model, base), matrices_of(model, base[:LOOPED])
     benchmark(judge, base)
     ours = best(lambda: judge(base), 7)
     batched = best(lambda: np.linalg.eigvalsh(A), 2)
-    looped = best(lambda: [sl.eigh(k, m, eigvals_only=True) for k, m in zip(K[:LOOPED], M[:LOOPED], strict=True)], 2)
+    looped = best(lambda: [sl.eigh(k, m, eigvals_only=True) for k, m in zip(K, M, strict=True)], 2)
     benchmark.extra_info["nanoseconds a build"] = round(1e9 * ours / len(base), 1)
     benchmark.extra_info["times batched eigenvalues"] = round(batched / ours, 1)
     benchmark.extra_info["times a loop of eigh"] = round(looped * len(base) / LOOPED / ours, 1)
@@ -137,7 +147,7 @@ def test_one_window_edge(benchmark, name):
     model = assembly.compile()
     _, base = builds_of(model, 0.05, dense_builds(model.size))
     pencil = Pencil.of(model)
-    limit = float(np.median(np.linalg.eigvalsh(normalised(model, base[:200])[2])[:, 2])) * (1 + 1e-9)
+    limit = float(np.median(np.linalg.eigvalsh(normalised(model, base[:200]))[:, 2])) * (1 + 1e-9)
 
     def judge(base: Array) -> Array:
         return count_below(pencil, Point(base, model.positive), [limit])[0]
@@ -156,7 +166,7 @@ def test_study_with_windows_on_three_modes(benchmark, bodies, least):
     """Goal: 20 times batched eigenvalues at 20 bodies, 60 at 60; bounds are half of what was seen."""
     model = tree(bodies).compile()
     _, base = builds_of(model, 0.03, dense_builds(bodies))
-    middle = np.sqrt(np.linalg.eigvalsh(normalised(model, nominal(model))[2])[0, :3]) / (2 * np.pi)
+    middle = np.sqrt(np.linalg.eigvalsh(normalised(model, nominal(model)))[0, :3]) / (2 * np.pi)
     objectives: tuple[Objective, ...] = tuple(
         Frequency(requirement=Target(f, 0.01 * f), label="", mode=mode) for mode, f in enumerate(middle, start=1)
     )
@@ -172,13 +182,14 @@ def test_beat_window(benchmark, bodies, least):
     """Goal: 4, 15 and 50 times batched eigenvalues, the check by inertia included."""
     model = twins(bodies).compile()
     _, base = builds_of(model, 0.01, dense_builds(bodies))
-    omega = np.sqrt(np.linalg.eigvalsh(normalised(model, base[:200])[2])[:, :2])
-    typical = float(np.median(2 * np.pi / (omega[:, 1] - omega[:, 0])))
-    beat = BeatPeriod(requirement=Target(typical, 0.1 * typical), label="", between=(1, 2))
+    omega = np.sqrt(np.linalg.eigvalsh(normalised(model, base[:200]))[:, :2])
+    beats = 2 * np.pi / (omega[:, 1] - omega[:, 0])
+    typical, within = float(np.median(beats)), float(np.ptp(np.quantile(beats, [0.25, 0.75])))
+    beat = BeatPeriod(requirement=Target(typical, within), label="", between=(1, 2))
     judge = Judge.of(Evaluator(model, (beat,)), NONE)
     ratio, values = compared(benchmark, model, base, judge.passes)
     splitting = (values[:, 1] - values[:, 0]) / np.sqrt(values[:, :2]).sum(axis=1) / (2 * np.pi)
-    expected = np.abs(1 / splitting - typical) <= 0.1 * typical
+    expected = np.abs(1 / splitting - typical) <= within
     np.testing.assert_array_equal(judge.passes(base), expected)
     assert 0.05 < expected.mean() < 0.95
     assert ratio > least
@@ -188,7 +199,7 @@ def test_a_million_builds_of_twenty_bodies(benchmark):
     """Goal: about a second on two cores; this is one core, with the drawing of 40 normal errors a build."""
     model = tree(20).compile()
     errors, _ = builds_of(model, 0.03, 2)
-    f = float(np.sqrt(np.linalg.eigvalsh(normalised(model, nominal(model))[2])[0, 0]) / (2 * np.pi))
+    f = float(np.sqrt(np.linalg.eigvalsh(normalised(model, nominal(model)))[0, 0]) / (2 * np.pi))
     found = Evaluator(model, (Frequency(requirement=Target(f, 0.01 * f), label="", mode=1),))
     began = time.perf_counter()
     measured = benchmark.pedantic(lambda: measure_yield(found, NONE, errors, seed=1, builds=2**20), rounds=1)

@@ -2,11 +2,11 @@
 
 import numpy as np
 import pytest
+from benchmarks.problems import FAMILIES, make_problem
 from hypothesis import given
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
 
-from benchmarks.problems import FAMILIES, make_problem
 from inverse.design.population import Budget, Stop, solve_population
 
 TOLERANCE = 1e-10  # the default

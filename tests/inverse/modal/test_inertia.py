@@ -57,10 +57,11 @@ def test_counts_are_those_of_dense_eigenvalues(name):
     values = eigenvalues(model, point)
     sound = np.isfinite(values).all(axis=1)
     middle = np.median(values[sound], axis=0)
-    # Limits within the spread of a mode (off the median itself, which is some build's own), between modes, beyond all.
-    limits = [float(v) for v in (*(middle * (1 + 1e-7)), *((middle[1:] + middle[:-1]) / 2), 2 * middle[-1]) if v > 1e-9 * middle[-1]]
-    counted = count_below(Pencil.of(model), point, limits)
-    expected = (values[None] < np.array(limits)[:, None, None]).sum(axis=2)
+    # Within the spread of a mode (off the median itself, which is some build's own), between modes, beyond all.
+    limits = np.concatenate([middle * (1 + 1e-7), (middle[1:] + middle[:-1]) / 2, [2 * middle[-1]]])
+    limits = limits[limits > 1e-9 * middle[-1]]
+    counted = count_below(Pencil.of(model), point, limits.tolist())
+    expected = (values[None] < limits[:, None, None]).sum(axis=2)
     np.testing.assert_array_equal(counted[:, sound], expected[:, sound])
     assert (counted[:, ~sound] == -1).all()
 
