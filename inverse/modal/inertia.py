@@ -43,8 +43,8 @@ from inverse.assembly.terms import Array, IntArray, Monomials, Point, Squares
 from inverse.matrices.stack import Matrices
 from inverse.modal.solution import solve_modes
 
-CERTAIN = 1e-10
-"""A count stands if it is exact for a shift within this share of the one asked: a tenth of the slack on edges."""
+CERTAIN = 5e-10
+"""A count stands if it is exact for a shift within this share of the one asked: half the slack on edges of windows."""
 
 WORKSPACE = 2_000_000
 """Numbers worked on at a time: some megabytes, which stay near the processor."""
@@ -54,6 +54,9 @@ LARGEST_CHUNK = 16_384
 
 SMALLEST_CHUNK = 512
 """And at least, where a row of builds still outweighs the call that works on it."""
+
+LARGEST_DENSE = 4_096
+"""Builds solved dense at a time at most."""
 
 LARGEST_PRODUCT = 4
 """Whole powers up to this one are multiplied out."""
@@ -265,9 +268,7 @@ def _is_forest(later: Sequence[Sequence[int]]) -> bool:
     return all(len(own) <= 1 for own in later)
 
 
-def _levels(
-    keys: Sequence[tuple[int, int]], later: Sequence[tuple[int, ...]], first: IntArray
-) -> Iterator[Level]:
+def _levels(keys: Sequence[tuple[int, int]], later: Sequence[tuple[int, ...]], first: IntArray) -> Iterator[Level]:
     """Consecutive pivots of one height and width, those without entries left out."""
     slot = {(k, j): int(first[k]) + s for k, own in enumerate(later) for s, j in enumerate(own)}
     for (_, width), pivots in itertools.groupby(range(len(keys)), key=lambda k: keys[k]):
@@ -318,13 +319,9 @@ class Rows:
         factors: list[list[tuple[int, float]]] = [[] for _ in range(len(monomials))]
         for i, j in zip(*monomials.exponents.nonzero(), strict=True):
             factors[i].append((int(j), float(monomials.exponents[i, j])))
-        for i, own, powers in zip(
-            monomials.mixed, monomials.signed_dimension, monomials.signed_power, strict=True
-        ):
+        for i, own, powers in zip(monomials.mixed, monomials.signed_dimension, monomials.signed_power, strict=True):
             factors[i] += [(int(j), float(e)) for j, e in zip(own, powers, strict=True) if e]
-        rows.monomials = [
-            (float(c), rows.product(own)) for c, own in zip(monomials.coefficients, factors, strict=True)
-        ]
+        rows.monomials = [(float(c), rows.product(own)) for c, own in zip(monomials.coefficients, factors, strict=True)]
         return rows
 
     def __len__(self) -> int:
@@ -446,8 +443,9 @@ class Recipe:
                         shares.append((number, place[i, j], product[0]))
                     else:
                         start[place[i, j]] += number
-        number, entry, at = np.array(shares, float).reshape(-1, 3).T
-        table = sp.coo_array((number, (entry.astype(np.intp), at.astype(np.intp))), shape=(size, len(rows)))
+        numbers, entries, sources = np.array(shares, float).reshape(-1, 3).T
+        at = entries.astype(np.intp), sources.astype(np.intp)
+        table = sp.coo_array((numbers, at), shape=(size, len(rows)))
         return cls(start, sp.csr_array(table), tuple(rows.monomials[i] for i in squares.weight.tolist()))
 
     def widened(self, rows: int) -> Recipe:
@@ -464,9 +462,7 @@ class Recipe:
         """For every entry its start, scaled rows, rows to add, and rows to subtract."""
         table = self.by_row
         entries = [slice(a, b) for a, b in itertools.pairwise(table.indptr.tolist())]
-        terms = [
-            list(zip(table.data[own].tolist(), table.indices[own].tolist(), strict=True)) for own in entries
-        ]
+        terms = [list(zip(table.data[own].tolist(), table.indices[own].tolist(), strict=True)) for own in entries]
         return tuple(
             (
                 float(start),
@@ -481,14 +477,10 @@ class Recipe:
         """Entries (n + s, B) of rows of builds."""
         spare, known = np.empty(rows.shape[1]), list(rows)
         for out, (start, scaled, plus, minus) in zip(entries, self.steps, strict=True):
-            value: Array | float = start
+            # A number until the row is written for the first time: filling it first would be one more pass.
+            value = np.asarray(start)
             for c, r in scaled:
-                if value is out:
-                    np.add(out, np.multiply(known[r], c, spare), out)
-                else:
-                    value = np.multiply(known[r], c, out)
-                    if start:
-                        np.add(out, start, out)
+                value = np.add(value, np.multiply(known[r], c, spare), out)
             for r in plus:
                 value = np.add(known[r], value, out)
             for r in minus:
@@ -549,7 +541,7 @@ class Chunk:
     @property
     def builds(self) -> int:
         """How many."""
-        return self.stiffness.shape[1]
+        return int(self.stiffness.shape[1])
 
 
 @dataclass(frozen=True)
@@ -624,12 +616,14 @@ class Pencil:
     def _definiteness(self, mass: Array) -> float:
         """``μ`` such that ``M ≥ μ diag(M)``: one where ``M`` is diagonal, else half of what a few builds show.
 
-        The factor hardly varies within tolerances, and `CERTAIN` leaves another factor of ten.
+        The factor hardly varies within tolerances.
         """
         if len(mass) == self.elimination.size:
             return 1.0
         shown = np.unique(np.linspace(0, mass.shape[1] - 1, 5).astype(np.intp))
         M = self.full(mass[:, shown])
+        if not (np.isfinite(M).all() and (np.einsum("bii->bi", M) > 0).all()):
+            return 0.0
         scale = 1 / np.sqrt(np.einsum("bii->bi", M))
         share = np.linalg.eigvalsh(M * scale[:, :, None] * scale[:, None, :])[:, 0].min()
         return max(float(share) / 2, 0.0)
@@ -654,9 +648,7 @@ class Pencil:
         return float(weight @ (chunk.stiffness_top + abs(shift) * chunk.mass_top)), np.asarray(weight)
 
 
-def count_below(
-    pencil: Pencil, point: Point, shifts: Sequence[float], rigid: int | None = None
-) -> NDArray[np.int32]:
+def count_below(pencil: Pencil, point: Point, shifts: Sequence[float], rigid: int | None = None) -> NDArray[np.int32]:
     """Number of eigenvalues below some limits for a batch of builds at rest.
 
     Where the first elimination leaves a count uncertain another order is tried, and where that fails too
@@ -716,7 +708,8 @@ def parts(builds: IntArray, size: int) -> list[IntArray]:
 
 def dense_chunk(model: Model) -> int:
     """How many builds may be solved dense at a time, so that memory stays bounded."""
-    return max(WORKSPACE // (model.size * max(len(model.stiffness), len(model.mass), model.size)), 1)
+    tallest = max(len(model.stiffness), len(model.mass), model.size)
+    return int(np.clip(WORKSPACE // (model.size * tallest), 1, LARGEST_DENSE))
 
 
 def _chosen(point: Point, builds: IntArray) -> Point:
@@ -726,9 +719,7 @@ def _chosen(point: Point, builds: IntArray) -> Point:
     return point if len(builds) == point.builds else Point(point.values.T[:, builds].T, point.positive)
 
 
-def count_pivots(
-    pencil: Pencil, point: Point, shifts: Sequence[float]
-) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:
+def count_pivots(pencil: Pencil, point: Point, shifts: Sequence[float]) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:
     """Negative pivots alone: how many, and which of these counts are certain, shape (S, B) each."""
     below = np.zeros((len(shifts), point.builds), np.int32)
     certain = np.zeros((len(shifts), point.builds), bool)
@@ -742,9 +733,7 @@ def count_pivots(
     return below, certain
 
 
-def count_chunk(
-    pencil: Pencil, chunk: Chunk, shift: float
-) -> tuple[NDArray[np.uint16], NDArray[np.bool_]]:
+def count_chunk(pencil: Pencil, chunk: Chunk, shift: float) -> tuple[NDArray[np.uint16], NDArray[np.bool_]]:
     """The same for one chunk and one shift, shape (B,) each."""
     elimination = pencil.elimination
     rounding, weight = pencil.rounding(chunk, shift)

@@ -61,6 +61,7 @@ TOGETHER = 0.1
 SWEEPS = 6
 """Sweeps of plane rotations for three and more vectors; they converge quadratically."""
 
+
 @dataclass(frozen=True, slots=True)
 class Block:
     """Neighbouring modes at positions `first` to `last` among all, rigid ones included.
@@ -111,7 +112,7 @@ def choose_blocks(
     Returns
     -------
     tuple of Block
-        None where no build looked at has a stable rest position.
+        Empty where no build looked at has a stable rest position.
     """
     shown = np.unique(np.linspace(0, point.builds - 1, PILOTS).astype(np.intp))
     pilots = chosen(point, shown[np.isfinite(point.values[shown]).all(axis=1)])
@@ -209,9 +210,7 @@ def refine_modes(
     return found
 
 
-def _tried(
-    pencil: Pencil, point: Point, blocks: Sequence[Block], positions: Sequence[int], steps: int
-) -> Neighbours:
+def _tried(pencil: Pencil, point: Point, blocks: Sequence[Block], positions: Sequence[int], steps: int) -> Neighbours:
     """Offsets from the shift of the first block."""
     shift = blocks[0].shift
     offsets, bounds = np.empty((len(positions), point.builds)), np.zeros(point.builds)

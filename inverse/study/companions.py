@@ -108,10 +108,6 @@ def contents(path: Path, noun: str) -> str:
         data = path.read_bytes()
     except OSError as error:
         raise QuantityError(expected, "a file that cannot be read", error.strerror or "") from None
-    except ValueError as error:
-        if isinstance(error, QuantityError):
-            raise
-        raise QuantityError(expected, "no such file", "no file can have such a name") from None
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:

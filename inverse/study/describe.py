@@ -4,14 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
 from inverse.assembly.algebra import Monomial
 from inverse.assembly.terms import Array
-from inverse.design.result import Design, Mode, ObjectiveRow
+from inverse.study.result import Design, Mode, ObjectiveRow
 from inverse.evaluation.evaluator import Evaluation, Evaluator
 from objectives.base import AtLeast, AtMost, Maximise, Minimise, Objective, Target, met
+from objectives.keep_out import KeepOut
 
 ALL_MODES_UP_TO = 500
 """Coordinates up to which every oscillating mode is recorded."""
@@ -90,7 +92,7 @@ def _axis(component: str) -> int:
 def objective_row(objective: Objective, value: float) -> ObjectiveRow:
     """One objective's row: what was asked, what is achieved, and the margin."""
     requirement = objective.requirement
-    asked: dict[str, float | bool]
+    asked: dict[str, Any]
     match requirement:
         case Target(target, within):
             asked = {"target": target, "within": within}
@@ -102,6 +104,8 @@ def objective_row(objective: Objective, value: float) -> ObjectiveRow:
             asked = {"minimise": True}
         case Maximise():
             asked = {"maximise": True}
+    if isinstance(objective, KeepOut):
+        asked["bands"] = [list(band) for band in objective.bands]
     known = bool(np.isfinite(value))
     verdict = met(requirement, np.array([value]))
     margin = None

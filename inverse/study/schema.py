@@ -887,6 +887,9 @@ def scope_of(raw: Mapping[str, Any]) -> Scope:
 def json_schema() -> dict[str, Any]:
     """JSON Schema (draft 2020-12) of the study file, for editors and for checks before a run."""
     schema = _without_null(StudyFile.model_json_schema(by_alias=True))
+    schema["properties"]["variables"]["propertyNames"] = entries.VARIABLE_NAME.json
+    for table in schema["$defs"].values():
+        table["title"] = table["properties"].get("kind", {}).get("const", table["title"])
     head = {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "Study"}
     return head | {key: value for key, value in schema.items() if key != "title"}
 

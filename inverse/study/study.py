@@ -20,7 +20,7 @@ from inverse.assembly.statics import Deflection
 from inverse.assembly.terms import Array
 from inverse.design.gradient import Outcome, solve_by_gradient
 from inverse.design.problem import Problem
-from inverse.design.result import Design, Result, Status
+from inverse.study.result import Design, Result, Status
 from inverse.design.shortfall import Shortfall, explain
 from inverse.design.verification import Verification, verify
 from inverse.errors import StudyError

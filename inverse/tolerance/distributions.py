@@ -197,4 +197,5 @@ class Cube:
 
         sobol = qmc.Sobol(max(self.units, 1), scramble=True, rng=self.seed)
         for b in range(0, builds, size):
-            yield sobol.random(size)[: builds - b, : self.units]
+            rest = builds - b
+            yield sobol.random(min(size, 1 << (rest - 1).bit_length()))[:rest, : self.units]

@@ -5,6 +5,7 @@ from __future__ import annotations
 import enum
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, Self
 
 from inverse.design.shortfall import Shortfall
@@ -43,7 +44,7 @@ class ObjectiveRow:
 
     kind: str
     label: str
-    asked: Mapping[str, float | bool]
+    asked: Mapping[str, Any]
     achieved: Number
     unit: str
     met: bool | None
@@ -138,6 +139,18 @@ class Result:
         if self.status is Status.MET:
             return self
         raise DesignError(f"{self.study}: {self.message}")
+
+    def save(self, folder: str | Path) -> Path:
+        """Write ``result.json`` and ``parts.csv`` into a folder.
+
+        Raises
+        ------
+        StudyError
+            If they cannot be written.
+        """
+        from inverse.study.archive import save_result
+
+        return save_result(self, folder)
 
     def as_record(self) -> dict[str, Any]:
         """Plain lists, dictionaries and numbers, ready for ``result.json``."""

@@ -1,0 +1,1 @@
+"""What a person reads: tables for a terminal, charts and the page."""
