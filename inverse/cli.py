@@ -94,9 +94,7 @@ def size(study: Path, out: Path | None, seed: int | None, as_json: bool, quiet: 
 )
 @common
 @guarded
-def modes(
-    study: Path, design: Path | None, out: Path | None, seed: int | None, as_json: bool, quiet: bool
-) -> int:
+def modes(study: Path, design: Path | None, out: Path | None, seed: int | None, as_json: bool, quiet: bool) -> int:
     """Compute the modes of the design as it stands and judge the objectives of STUDY by it."""
     from inverse import load_study
     from inverse.study.archive import load_result

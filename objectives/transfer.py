@@ -8,7 +8,7 @@ S        ``Φᵀ M_b Φ``, the mass terms of the receiving owner in the modes
 s(t)     ``qᴴ S q / Σ c²``, the owner's share of the energy: in [0, 1], and all shares sum to one
 
 Derivatives follow the motion, not single modes. With ``X = M̂⁻¹K̂`` in frozen shapes the change of ``g(X)c`` is
-``dq_i = Σ_j g[λ_i, λ_j] (dK̂_ij − λ_j dM̂_ij) c_j`` with divided differences of ``g(λ) = e^{i√λ t}`` [1]_, which in closed form are
+``dq_i = Σ_j g[λ_i, λ_j] (dK̂_ij − λ_j dM̂_ij) c_j`` with divided differences of ``g(λ) = e^{i√λ t}`` [1]_, in closed form
 ``i t e^{i m t} sinc(δ t/2)/(2m)``, ``m`` the mean of both circular frequencies and ``δ`` their difference: nothing is
 divided by a vanishing gap.
 
@@ -268,9 +268,7 @@ class TransferTime(Objective):
         s, slope, _ = share_slopes(state, self.source, self.target, np.full(state.builds, T))
         # A full exchange sin²(πt/2T) bends by π²/2T² at its maximum.
         bend = np.pi**2 / (2 * T**2)
-        enough = np.array(
-            [self._enough(exchange) for exchange in exchanges(state, self.source, self.target)]
-        )
+        enough = np.array([self._enough(exchange) for exchange in exchanges(state, self.source, self.target)])
         room = Measured(s.values - enough[:, None], s.gradient)
         return Pursuit(scaled(slope, -1 / (bend * within)), room)
 
@@ -376,5 +374,3 @@ class HandedAmplitude(Objective):
                 break
             when -= step
         return when
-
-

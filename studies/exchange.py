@@ -1,17 +1,14 @@
 """Size the lantern pair and draw how its lanterns exchange their swing.
 
-    python studies/exchange.py [STUDY] [PICTURE]
+python studies/exchange.py [STUDY] [PICTURE]
 """
 
 import sys
 from pathlib import Path
 
-import matplotlib
-
-matplotlib.use("svg")
-matplotlib.rcParams["svg.hashsalt"] = "exchange"
-import matplotlib.pyplot as plt
+import matplotlib as mpl
 import numpy as np
+from matplotlib.figure import Figure
 
 from inverse import load_study
 from inverse.evaluation.evaluator import Evaluator
@@ -31,6 +28,7 @@ def shares(study, result, source: str, seconds: float) -> tuple[np.ndarray, dict
 
 
 def main() -> None:
+    """Solve, compute and draw."""
     path = Path(sys.argv[1]) if len(sys.argv) > 1 else HERE / "lantern_pair.toml"
     picture = Path(sys.argv[2]) if len(sys.argv) > 2 else HERE / "exchange.svg"
     study = load_study(path)
@@ -38,12 +36,15 @@ def main() -> None:
     first = next(iter(study.model.components))
     t, by_body = shares(study, result, first, 100.0)
 
-    figure, axes = plt.subplots(figsize=(7.2, 2.6), layout="constrained")
+    figure = Figure(figsize=(7.2, 2.6), layout="constrained")
+    axes = figure.subplots()
     for (body, share), style in zip(by_body.items(), ("-", "--", "-.", ":", "-"), strict=False):
         axes.plot(t, share, style, label=body)
     axes.set(xlabel="time after release [s]", ylabel="share of the energy", xlim=(0, t[-1]), ylim=(0, 1.02))
-    axes.legend(loc="upper right", frameon=False, ncols=len(by_body))
-    figure.savefig(picture, metadata={"Date": None})
+    figure.legend(loc="outside upper right", frameon=False, ncols=len(by_body))
+    # Without a date and with names that do not change, the same study gives the same file.
+    with mpl.rc_context({"svg.hashsalt": "exchange"}):
+        figure.savefig(picture, metadata={"Date": None})
     print(f"{picture}: {study.title}")
 
 

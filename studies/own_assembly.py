@@ -1,7 +1,7 @@
 """Build a study in Python: an instrument shelf on two springs with a hung counterweight, swept over the shelf's mass.
 
-For each mass the spring rates are solved for that put bounce and pitch where they are wanted, and the table says what to
-order. No study file is involved.
+For each mass the spring rates are solved for that put bounce and pitch where they are wanted, and the table says
+what to order. No study file is involved.
 """
 
 import pandas as pd
@@ -42,6 +42,7 @@ def shelf(mass: float) -> Study:
 
 
 def main() -> None:
+    """Solve each variant and print the table."""
     rows = []
     for mass in (6.0, 9.0, 12.0, 15.0):
         result = shelf(mass).size(seed=1)

@@ -321,7 +321,7 @@ class Rod:
             raise ModelError(f"rod `{self.name}` must run between two joints, found {' and '.join(self.between)}")
         if first.directions != second.directions:
             raise ModelError(
-                f"rod `{self.name}` joins a joint in the plane to one in space: give both the same number of coordinates"
+                f"rod `{self.name}` joins a joint in the plane to one in space: give both as many coordinates"
             )
         return first, second
 

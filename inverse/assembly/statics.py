@@ -160,7 +160,7 @@ def _refuse_unsupported(
     if free.size and np.linalg.norm(free.T @ total) > 1e-9 * np.linalg.norm(largest):
         worst = coordinates[int(np.argmax(np.abs(free @ (free.T @ total))))]
         raise ModelError(
-            f"nothing carries the load on `{worst}`: the assembly does not rest in equilibrium; add a link to the ground "
+            f"nothing carries the load on `{worst}`: the assembly does not rest in equilibrium; add a link to ground "
             'that resists this motion, or set gravity = "0 m/s^2" if it floats'
         )
 

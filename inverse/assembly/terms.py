@@ -38,7 +38,9 @@ def add_at(out: Array, places: IntArray, values: Array) -> None:
     # Counting with weights is several times faster than numpy.add.at.
     rows, n = out.size // out.shape[-1], out.shape[-1]
     flat = (np.arange(rows)[:, None] * n + places).ravel()
-    out += np.bincount(flat, np.broadcast_to(values, (*out.shape[:-1], len(places))).ravel(), rows * n).reshape(out.shape)
+    out += np.bincount(flat, np.broadcast_to(values, (*out.shape[:-1], len(places))).ravel(), rows * n).reshape(
+        out.shape
+    )
 
 
 @dataclass(frozen=True)

@@ -15,14 +15,14 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from inverse.design.population import PopulationResult, Stop, solve_population
-from objectives.keep_out import KeepOut
 
 from inverse.assembly.terms import Array, IntArray
 from inverse.design.constrained import Evaluated, constrained_minimum
+from inverse.design.population import PopulationResult, Stop, solve_population
 from inverse.design.problem import Problem
 from inverse.evaluation.evaluator import Choices, Evaluation
 from objectives.base import Maximise
+from objectives.keep_out import KeepOut
 
 EXACT = 1e-8
 """Residuals, in windows, at which a target counts as hit."""
@@ -78,7 +78,7 @@ def solve_by_gradient(
     for attempt in _attempts(problem, rng):
         progress(attempt.words)
         found = attempt.run(problem, rng, starts, 1 + alternatives)
-        stopped = found.stopped_because.value.rstrip('.').lower()
+        stopped = found.stopped_because.value.rstrip(".").lower()
         if found.stopped_because is Stop.INFEASIBLE:
             middle = (problem.lower + problem.upper) / 2
             return Outcome(np.empty((0, len(middle))), middle, NOWHERE_STABLE)

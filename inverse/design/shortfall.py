@@ -9,12 +9,12 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
-from inverse.design.population import solve_population
 
 from inverse.assembly.parameters import Variable
 from inverse.assembly.terms import Array
 from inverse.design.constrained import Evaluated, constrained_minimum
 from inverse.design.gradient import room
+from inverse.design.population import solve_population
 from inverse.design.problem import Problem
 from inverse.evaluation.evaluator import Evaluator
 from inverse.units import Kind, format_quantity, quantity_dimension
@@ -129,7 +129,8 @@ def _window_change(objective: Objective, value: float) -> str:
                 f"widen `{objective.label}` from ± {format_quantity(within, unit)} to ± {format_quantity(needed, unit)}"
             )
         case AtLeast(limit) | AtMost(limit):
-            return f"move the limit of `{objective.label}` from {format_quantity(limit, unit)} to {format_quantity(value, unit)}"
+            moved = f"from {format_quantity(limit, unit)} to {format_quantity(value, unit)}"
+            return f"move the limit of `{objective.label}` {moved}"
         case _:
             return objective.label
 

@@ -12,7 +12,6 @@ from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
-from objectives.identity import Identification, identify
 
 from inverse.assembly.statics import Deflection
 from inverse.assembly.terms import Array, IntArray, Sums
@@ -26,6 +25,7 @@ from inverse.modal.sensitivity import (
     to_dimensions,
 )
 from inverse.modal.solution import ModalSolution, solve_modes
+from objectives.identity import Identification, identify
 from objectives.state import (
     Changes,
     Displacement,

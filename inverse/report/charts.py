@@ -1,20 +1,20 @@
 """Charts as inline SVG: real text, an accessible name, colours from the page's own palette.
 
-Coordinates are in user units of a box 640 wide; the page scales it to its column.
+Coordinates are in user units; the page scales a picture to its column, so that its width sets the size of its text.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from html import escape
 
 from inverse.report.tables import shown
 from inverse.study.result import Mode, ObjectiveRow
 
-WIDTH = 640
-LEFT, RIGHT = 90, 20
+WIDTH, LEFT, RIGHT = 640, 130, 20
+SHAPE_WIDTH, SHAPE_LEFT, SHAPE_RIGHT = 340, 96, 52
 
 MOST_SHAPES = 8
 """Mode shapes drawn; the rest is in the table."""
@@ -25,6 +25,7 @@ class Drawing:
     """An SVG picture under construction."""
 
     title: str
+    width: float
     height: float
     parts: list[str] = field(default_factory=list)
 
@@ -35,8 +36,8 @@ class Drawing:
 
     def svg(self) -> str:
         """The whole picture."""
-        name = escape(self.title)
-        head = f'<svg role="img" aria-label="{name}" viewBox="0 0 {WIDTH} {_number(self.height)}"><title>{name}</title>'
+        name, box = escape(self.title), f"0 0 {_number(self.width)} {_number(self.height)}"
+        head = f'<svg role="img" aria-label="{name}" viewBox="{box}"><title>{name}</title>'
         return head + "".join(self.parts) + "</svg>"
 
 
@@ -64,9 +65,9 @@ def frequency_chart(modes: Sequence[Mode], rows: Sequence[ObjectiveRow]) -> str:
         share = math.log(f / low) / math.log(high / low) if logarithmic else (f - low) / (high - low)
         return LEFT + (WIDTH - LEFT - RIGHT) * min(max(share, 0.0), 1.0)
 
-    lanes = [*(("keep out: " + row.label, band, "band") for row, band in bands)]
+    lanes = [*((row.label, band, "band") for row, band in bands)]
     lanes += [(row.label, _edges(row), "window") for row in windows]
-    drawing = Drawing("Frequencies against what was asked", 70 + 22.0 * len(lanes))
+    drawing = Drawing("Frequencies against what was asked", WIDTH, 70 + 22.0 * len(lanes))
     for i, (label, (first, last), kind) in enumerate(lanes):
         y = 12 + 22.0 * i
         a, b = place(low if first is None else first), place(high if last is None else last)
@@ -102,25 +103,30 @@ def _ticks(low: float, high: float, logarithmic: bool) -> list[float]:
     return [tick for tick in ticks if low <= tick <= high]
 
 
-def shape_charts(modes: Sequence[Mode]) -> list[tuple[Mode, str]]:
+def shape_charts(modes: Sequence[Mode], components: Mapping[str, tuple[str, ...]]) -> list[tuple[Mode, str]]:
     """The lowest modes, each as bars: one per component, right positive."""
-    return [(mode, _shape(mode)) for mode in modes[:MOST_SHAPES]]
+    return [(mode, _shape(mode, components)) for mode in modes[:MOST_SHAPES]]
 
 
-def _shape(mode: Mode) -> str:
-    bars = [(body if len(u) == 1 else f"{body} {i + 1}", v) for body, u in mode.shape.items() for i, v in enumerate(u)]
+def _shape(mode: Mode, components: Mapping[str, tuple[str, ...]]) -> str:
+    bars = [
+        (body if len(u) == 1 else f"{body} {axis}", v)
+        for body, u in mode.shape.items()
+        for axis, v in zip(components[body], u, strict=True)
+    ]
     bars = bars[:24]
-    drawing = Drawing(f"Mode {mode.number} at {shown(mode.frequency_hz, 'Hz')}", 12 + 18.0 * len(bars))
-    middle, reach = (LEFT + WIDTH) / 2, (WIDTH - LEFT) / 2 - RIGHT
+    drawing = Drawing(f"Mode {mode.number} at {shown(mode.frequency_hz, 'Hz')}", SHAPE_WIDTH, 12 + 18.0 * len(bars))
+    middle = (SHAPE_LEFT + SHAPE_WIDTH - SHAPE_RIGHT) / 2
+    reach = (SHAPE_WIDTH - SHAPE_LEFT - SHAPE_RIGHT) / 2
     drawing.add("line", x1=middle, y1=2, x2=middle, y2=drawing.height - 2, class_="axis")
     for i, (label, value) in enumerate(bars):
         y, size = 6 + 18.0 * i, abs(value) * reach
         drawing.add("rect", x=middle if value >= 0 else middle - size, y=y, width=max(size, 0.5), height=12,
                     class_="forward" if value >= 0 else "backward")  # fmt: skip
-        drawing.add("text", _short(label), x=4, y=y + 10, class_="label")
-        drawing.add("text", f"{value:+.3f}", x=WIDTH - 4, y=y + 10, class_="value")
+        drawing.add("text", _short(label, 14), x=4, y=y + 10, class_="label")
+        drawing.add("text", f"{value:+.3f}", x=SHAPE_WIDTH - 4, y=y + 10, class_="value")
     return drawing.svg()
 
 
-def _short(text: str, width: int = 18) -> str:
+def _short(text: str, width: int = 20) -> str:
     return text if len(text) <= width else text[: width - 1] + "…"

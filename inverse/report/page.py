@@ -29,10 +29,10 @@ LITERATURE = {
 
 CAUTIONS = (
     (
-        ("length", "rod_mass", "hung"),
+        ("length", "rod_mass"),
         "Suspended and swinging masses can fall and strike. Have hangers, pivots and ties dimensioned and checked by a "
-        "licensed person for strength, fatigue and wear, secure them against falling, keep people out of the swing, and "
-        "follow the local codes.",
+        "licensed person for strength, fatigue and wear, secure them against falling, keep people out of the swing, "
+        "and follow the local codes.",
     ),
     (
         ("rate", "rates", "preload"),
@@ -40,9 +40,9 @@ CAUTIONS = (
         "assembly, and follow the local codes.",
     ),
     (
-        ("inertia", "ratio"),
-        "Turning parts can burst and catch. Guard them, keep to permitted speeds, and have shafts and couplings checked for "
-        "strength by a licensed person under the local codes.",
+        ("N m/rad",),
+        "Turning parts can burst and catch. Guard them, keep to permitted speeds, and have shafts and couplings "
+        "checked for strength by a licensed person under the local codes.",
     ),
     (
         ("area", "position"),
@@ -71,8 +71,7 @@ def render_page(result: Result, study_text: str) -> str:
             {
                 "name": name,
                 "cells": [
-                    shown(one.variables[name], design.variable_units[name])
-                    for one in (design, *result.alternatives)
+                    shown(one.variables[name], design.variable_units[name]) for one in (design, *result.alternatives)
                 ],
             }
             for name in result.variables
@@ -101,7 +100,7 @@ def render_page(result: Result, study_text: str) -> str:
         rigid=f"Rigid modes: {design.rigid_modes}." if design.rigid_modes else "",
         shapes=[
             ({"number": mode.number, "frequency": shown(mode.frequency_hz, "Hz")}, Markup(chart))
-            for mode, chart in shape_charts(design.modes)
+            for mode, chart in shape_charts(design.modes, design.components)
         ],
         versions=", ".join(f"{name} {version}" for name, version in result.versions.items()),
         literature=LITERATURE.get(result.route, ()),
@@ -112,5 +111,6 @@ def render_page(result: Result, study_text: str) -> str:
 
 def _cautions(result: Result) -> list[str]:
     """What can hurt somebody in an assembly with such parts."""
-    keys = {name.split(".")[1] for name in result.dimensions if "." in name}
-    return [words for triggers, words in CAUTIONS if keys & set(triggers)]
+    known = {name.split(".")[1] for name in result.dimensions if "." in name}
+    known |= set(result.design.dimension_units.values())
+    return [words for triggers, words in CAUTIONS if known & set(triggers)]

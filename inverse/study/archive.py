@@ -114,7 +114,9 @@ def load_result(folder: str | Path) -> Result:
 
 
 def _result(record: dict[str, Any]) -> Result:
-    known = {key: record[key] for key in ("study", "title", "command", "message", "route", "seed", "reach", "tolerance")}
+    known = {
+        key: record[key] for key in ("study", "title", "command", "message", "route", "seed", "reach", "tolerance")
+    }
     shortfall, verification, certificate = (record[key] for key in ("shortfall", "verification", "certificate"))
     return Result(
         **known,
@@ -152,6 +154,7 @@ def _design(record: dict[str, Any]) -> Design:
         variable_units={name: entry["unit"] for name, entry in record["variables"].items()},
         dimensions={name: entry["value"] for name, entry in record["dimensions"].items()},
         dimension_units={name: entry["unit"] for name, entry in record["dimensions"].items()},
+        components={body: tuple(axes) for body, axes in record["components"].items()},
         modes=tuple(
             Mode(**(mode | {"shape": {body: tuple(u) for body, u in mode["shape"].items()}}))
             for mode in record["modes"]

@@ -10,8 +10,8 @@ import numpy as np
 
 from inverse.assembly.algebra import Monomial
 from inverse.assembly.terms import Array
-from inverse.study.result import Design, Mode, ObjectiveRow
 from inverse.evaluation.evaluator import Evaluation, Evaluator
+from inverse.study.result import Design, Mode, ObjectiveRow
 from objectives.base import AtLeast, AtMost, Maximise, Minimise, Objective, Target, met
 from objectives.keep_out import KeepOut
 
@@ -46,6 +46,11 @@ def describe(evaluation: Evaluation) -> Design:
         variable_units={v.name: v.unit for v in parameters.variables},
         dimensions=_shown(evaluation),
         dimension_units={d.name: d.unit for d in parameters.dimensions},
+        components={
+            body: tuple(c.rpartition(".")[2] for c in sorted(own, key=_axis))
+            for body, own in model.bodies.items()
+            if own
+        },
         modes=tuple(_modes(evaluation)),
         rigid_modes=state.rigid,
         objectives=tuple(

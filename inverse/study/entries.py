@@ -236,7 +236,7 @@ def read_quantity(value: object, kind: Kind, sign: Sign = "any", most: float = m
     example = kind.expectation.removeprefix(kind.noun)
     expected = f"{kind.noun}{_SIGN_WORDS[sign]}{example}"
     number = _sized(parse_quantity(_number(value, expected), kind), expected, value)
-    if number < 0 <= {"any": -1}.get(sign, 0) or (number == 0 and sign == "positive"):
+    if (number < 0 and sign != "any") or (number == 0 and sign == "positive"):
         raise QuantityError(expected, found(value))
     if number > most:
         raise QuantityError(f"{kind.noun} up to {most:g}", found(value), 'a share is a number, 0.95, or "95 %"')
@@ -350,7 +350,8 @@ def read_product(value: str, scope: Scope) -> Product:
 
 
 def _check_unit(product: Product, kind: Kind, scope: Scope) -> None:
-    check_product(product, kind, {name: known.dimension for name, known in scope.variables.items() if known})
+    known = ((name, scope.variables[name]) for name, _ in product.powers)
+    check_product(product, kind, {name: variable.dimension for name, variable in known if variable})
 
 
 def _check_sign(product: Product, value: str, sign: Sign, kind: Kind, scope: Scope) -> None:

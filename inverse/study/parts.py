@@ -177,6 +177,7 @@ class Parts:
             return None
 
     def _check_hanging(self) -> None:
+        known_to_end: set[str] = set()
         for i, table in enumerate(self.tables.body):
             if not isinstance(table, schema.Pendulum) or table.hung_from is None:
                 continue
@@ -189,18 +190,20 @@ class Parts:
                 expected = "a pendulum or a mass that moves horizontally"
                 hint = "this one gives its swing no first-order coupling"
                 self.names.problems.add(where, "hung_from", expected, found(table.hung_from), hint)
-            elif circle := self._circle(table.name):
+            elif circle := self._circle(table.name, known_to_end):
                 self.names.problems.add(where, "hung_from", "a pendulum that hangs from above", f"a circle, {circle}")
 
-    def _circle(self, name: str) -> str:
-        """The way from a pendulum back to itself, if there is one."""
-        way = [name]
-        while isinstance(body := self.names.bodies.get(way[-1]), Pendulum) and body.hung_from is not None:
-            way.append(body.hung_from)
-            if body.hung_from == name:
-                return " → ".join(way if len(way) < 8 else [*way[:4], "…", *way[-3:]])
-            if len(way) > len(self.names.bodies):
-                return ""
+    def _circle(self, name: str, known_to_end: set[str]) -> str:
+        """The way up from a pendulum as far as it repeats itself, if it does and has not been followed before."""
+        way: dict[str, None] = {}
+        while isinstance(body := self.names.bodies.get(name), Pendulum) and name not in known_to_end:
+            if name in way:
+                names = [*way][[*way].index(name) :]
+                known_to_end.update(way)
+                return " → ".join([*(names if len(names) < 8 else [*names[:4], "…", *names[-3:]]), name])
+            way[name] = None
+            name = body.hung_from or ""
+        known_to_end.update(way)
         return ""
 
     def _check_ends(self) -> None:

@@ -169,6 +169,8 @@ def _compiled(
             return assembly.compile(variables, deflections)
     except ModelError as error:
         problems.stop(str(error))
+    except RecursionError:
+        problems.stop("pendulums hang one from another too many times over")
     except (ArithmeticError, ValueError) as error:
         problems.stop(f"the parts make no assembly that can be computed: {_one_line(error)}")
 

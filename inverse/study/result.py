@@ -54,12 +54,16 @@ class ObjectiveRow:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Design:
-    """One set of parts and what its assembly does."""
+    """One set of parts and what its assembly does.
+
+    `components` names, for each body, the axes in the order in which a mode's shape lists them.
+    """
 
     variables: Mapping[str, float]
     variable_units: Mapping[str, str]
     dimensions: Mapping[str, float]
     dimension_units: Mapping[str, str]
+    components: Mapping[str, tuple[str, ...]]
     modes: tuple[Mode, ...]
     rigid_modes: int
     objectives: tuple[ObjectiveRow, ...]
@@ -215,6 +219,7 @@ def _design_record(design: Design) -> dict[str, Any]:
     return {
         "variables": _with_units(design.variables, design.variable_units),
         "dimensions": _with_units(design.dimensions, design.dimension_units),
+        "components": _plain(design.components),
         "modes": [_plain(mode) for mode in design.modes],
         "rigid_modes": design.rigid_modes,
         "objectives": [_plain(row) for row in design.objectives],

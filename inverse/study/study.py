@@ -12,7 +12,6 @@ from typing import Any
 
 import numpy as np
 import scipy
-from inverse.study.content import SolveSettings, StudyContent
 
 from inverse.assembly.assembly import Assembly, Model
 from inverse.assembly.parameters import Variable
@@ -20,12 +19,13 @@ from inverse.assembly.statics import Deflection
 from inverse.assembly.terms import Array
 from inverse.design.gradient import Outcome, solve_by_gradient
 from inverse.design.problem import Problem
-from inverse.study.result import Design, Result, Status
 from inverse.design.shortfall import Shortfall, explain
 from inverse.design.verification import Verification, verify
 from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluation, Evaluator
+from inverse.study.content import SolveSettings, StudyContent
 from inverse.study.describe import describe, evaluated
+from inverse.study.result import Design, Result, Status
 from objectives.base import Objective
 
 VERSION = "0.1.0"
@@ -197,14 +197,14 @@ class Study:
         rows = evaluation.state.matrices.component_rows(names := tuple(self.model.components))[0]
         worst = names[int(np.argmax(np.abs(rows @ modes.shapes[0, :, j])))]
         raise StudyError(
-            f"{self.name}: the assembly topples: its rest position is not a stable equilibrium, and `{worst}` moves away "
+            f"{self.name}: the assembly topples: its rest position is no stable equilibrium, and `{worst}` moves away "
             "fastest; stiffen its links, lower its centre of mass or widen the support"
         )
 
     def _refuse_route(self) -> None:
         if self.solve.route not in ("auto", "gradient"):
             raise StudyError(
-                f'{self.name}: solve.route = "{self.solve.route}" is not available in this version; use "auto" or "gradient"'
+                f'{self.name}: solve.route = "{self.solve.route}" is not in this version; use "auto" or "gradient"'
             )
 
     def _result(
@@ -276,6 +276,6 @@ def _doubts(evaluator: Evaluator, record: Design) -> tuple[str, ...]:
         low, high = min(frequencies), max(frequencies)
         if wanted > MISREAD_UNIT * high or wanted < low / MISREAD_UNIT:
             doubts.append(
-                f"`{row.label}` asks for {wanted:.4g} Hz, the modes lie between {low:.4g} and {high:.4g} Hz: MHz or mHz?"
+                f"`{row.label}` asks for {wanted:.4g} Hz, the modes are at {low:.4g} to {high:.4g} Hz: MHz or mHz?"
             )
     return tuple(doubts)

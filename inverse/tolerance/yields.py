@@ -258,20 +258,20 @@ class Judge:
         base : ndarray, shape (B, D)
             Base dimensions; fastest where every column is contiguous.
         """
-        model = self.pencil.model
-        left = np.arange(len(base))
-        whole = base.T[model.parameters.positive].min(axis=0, initial=np.inf) > 0
-        if not whole.all():
-            left = left[whole]
-        point = _rest(model, base[left])
+        model, positive = self.pencil.model, self.pencil.model.parameters.positive
+        left, verdicts = np.arange(len(base)), np.zeros(len(base), bool)
+        if not (base.T.min(axis=1)[positive] > 0).all():
+            left = np.flatnonzero((base[:, positive] > 0).all(axis=1))
+            base = base.T[:, left].T
+        point = _rest(model, base)
         if len(model.dependents):
             sound = np.flatnonzero(np.isfinite(point.values).all(axis=1))
             left, point = left[sound], chosen(point, sound)
+        kept = np.arange(len(left))
         for decide in self._tests():
-            if len(left):
-                passed = np.flatnonzero(decide(point))
-                left, point = left[passed], chosen(point, passed)
-        verdicts = np.zeros(len(base), bool)
+            point = chosen(point, kept)
+            kept = np.flatnonzero(decide(point)) if len(kept) else kept
+            left = left[kept]
         verdicts[left] = True
         return verdicts
 

@@ -160,7 +160,10 @@ def test_first_great_maximum_counts_and_a_close_call_is_flagged():
 def test_a_release_that_excites_one_mode_transfers_nothing():
     assembly = Assembly(
         bodies=(Mass(name="a", mass=1.0), Mass(name="b", mass=1.0)),
-        links=(Spring(name="k", between=("a", "ground"), rate=1.0), Spring(name="l", between=("b", "ground"), rate=2.0)),
+        links=(
+            Spring(name="k", between=("a", "ground"), rate=1.0),
+            Spring(name="l", between=("b", "ground"), rate=2.0),
+        ),
     )
     values = measure(
         assembly,

@@ -137,9 +137,7 @@ def test_a_hidden_chain_is_found_with_default_settings(n):
     )
     model = assembly.compile(tuple(Variable(name=f"x{i}", low=low[i], high=4 * low[i]) for i in range(n)))
     f = Evaluator(model, ()).at(hidden).state.modes.frequencies[0]
-    wanted = tuple(
-        Frequency(requirement=Target(f[j], 1e-4 * f[j]), label=f"f{j + 1}", mode=j + 1) for j in range(n)
-    )
+    wanted = tuple(Frequency(requirement=Target(f[j], 1e-4 * f[j]), label=f"f{j + 1}", mode=j + 1) for j in range(n))
     problem = Problem(Evaluator(model, wanted))
     found = solve_by_gradient(problem, seed=1, starts=24, alternatives=0)
     reached = problem.evaluate(found.closest[None]).state.modes.frequencies[0]

@@ -48,9 +48,7 @@ def pendulums(symmetric: bool) -> tuple[Assembly, tuple[Variable, ...], np.ndarr
     x = [1.0, 1.0, 1.0, 2.0, 2.0, 3.0] if symmetric else [1.0, 1.1, 0.93, 2.0, 2.6, 3.0]
     names = ["la", "lb", "lc", "ka", "kb", "m"]
     assembly = Assembly(
-        bodies=tuple(
-            Pendulum(name=n, mass=P("m"), length=P(f"l{n}"), rod_mass=0.2, bob_radius=0.1) for n in "abc"
-        ),
+        bodies=tuple(Pendulum(name=n, mass=P("m"), length=P(f"l{n}"), rod_mass=0.2, bob_radius=0.1) for n in "abc"),
         links=(
             Spring(name="ab", between=("a", "b"), rate=P("ka"), at=0.7, mass=0.1),
             Spring(name="bc", between=("b", "c"), rate=P("kb"), at=0.7),
@@ -64,7 +62,13 @@ def stage() -> tuple[Assembly, tuple[Variable, ...], np.ndarray]:
     assembly = Assembly(
         bodies=(Platform(name="stage", mass=80.0, inertia=(3.0, 4.0, 5.0), centre=(P("offset"), 0.01, 0.05)),),
         links=tuple(
-            Mount(name=f"m{i}", between=("stage", "ground"), at=(P(f"{sx} * half"), sy, -0.1), rates=(P("k"), P("0.5 * k")), height=P("h"))
+            Mount(
+                name=f"m{i}",
+                between=("stage", "ground"),
+                at=(P(f"{sx} * half"), sy, -0.1),
+                rates=(P("k"), P("0.5 * k")),
+                height=P("h"),
+            )
             for i, (sx, sy) in enumerate([(1, 0.3), (1, -0.3), (-1, 0.3), (-1, -0.3)])
         ),
     )
@@ -156,7 +160,9 @@ def test_objectives_of_pendulums(kind, symmetric):
     [
         EnergyShare(requirement=T, label="", mode=1, owner="stage.z"),
         EnergyShare(requirement=T, label="", mode=2, owner="stage.ry"),
-        NodalPoint(requirement=T, label="", mode=2, own=("stage.z",), bodies={"stage": ("stage.x", "stage.y", "stage.z")}),
+        NodalPoint(
+            requirement=T, label="", mode=2, own=("stage.z",), bodies={"stage": ("stage.x", "stage.y", "stage.z")}
+        ),
         StaticSag(requirement=AtMost(0.1), label="", sag=Sag("stage.z")),
         StaticSag(requirement=AtMost(0.1), label="", sag=Sag("m0")),
         Frequency(requirement=T, label="", mode=1),
@@ -194,9 +200,21 @@ def test_motion_is_smooth_where_frequencies_coincide(kind):
     )
     known, x = variables(ka=1.0, kb=1.0, kc=1.0), np.ones(3)
     if kind == "transfer":
-        check(assembly, known, x, TransferCompleteness(requirement=T, label="", source="a.x", target="b", time=1.3), scale=0.2)
+        check(
+            assembly,
+            known,
+            x,
+            TransferCompleteness(requirement=T, label="", source="a.x", target="b", time=1.3),
+            scale=0.2,
+        )
     elif kind == "amplitude":
-        check(assembly, known, x, HandedAmplitude(requirement=T, label="", source="a.x", target="b.x", horizon=1.5), scale=0.2)
+        check(
+            assembly,
+            known,
+            x,
+            HandedAmplitude(requirement=T, label="", source="a.x", target="b.x", horizon=1.5),
+            scale=0.2,
+        )
     else:
         model = assembly.compile(known)
         both = [Evaluator(model, (Frequency(requirement=T, label="", mode=m),)) for m in (1, 2)]

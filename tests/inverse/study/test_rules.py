@@ -5,7 +5,6 @@ stands for anything. What is refused follows the format of the study file; the w
 """
 
 import re
-from pathlib import Path
 
 import pytest
 
@@ -1263,7 +1262,7 @@ def test_the_path_is_in_front_of_the_message(tmp_path):
         (b"a = " + b"[" * 100_000, "this is no TOML: brackets nested beyond all use"),
         (b"a = " + b"9" * 5_000, "this is no TOML: a number with too many digits"),
         (b"a = 1\na = 2\n", "(at line 2, column 6)"),
-        (b"a = 2026-02-30\n", "this is no TOML: day is out of range for month"),
+        (b"a = 2026-02-30\n", "this is no TOML: Invalid date or datetime (at line 1, column 5)"),
         (b"a = 0x" + b"f" * 100_000, "expected a key that is known here, found 'a'"),
         (b"seed = 0x" + b"f" * 100_000 + b"\n", "expected a key that is known here, found 'seed'"),
         (b"title = 0x" + b"f" * 5_000 + b"\n", "expected a text, found a huge number"),
@@ -1288,11 +1287,14 @@ def test_a_mark_of_byte_order_is_accepted(tmp_path):
 
 
 def test_a_missing_file_and_a_folder_are_refused(tmp_path):
-    for path, message in ((tmp_path / "none.toml", "found no such file"), (tmp_path, "found a folder")):
+    for path, message in (
+        (tmp_path / "none.toml", "found no such file"),
+        (tmp_path / "a\0b", "found no such file"),
+        (tmp_path / ("a" * 5000), "found a file that cannot be read; File name too long"),
+        (tmp_path, "found a folder"),
+    ):
         with pytest.raises(StudyError, match=message):
             read_study(path)
-    with pytest.raises(StudyError, match="no file can have such a name"):
-        read_study(Path("a\0b"))
 
 
 def test_at_most_ten_problems_are_reported_one_a_line(folder):
@@ -1304,11 +1306,12 @@ def test_at_most_ten_problems_are_reported_one_a_line(folder):
 
 def test_parts_that_do_not_fit_together_are_an_error_of_the_study(folder):
     """What the assembly refuses comes with the name of the file."""
-    text = '[[body]]\nname = "deck"\nkind = "mass"\nmoves = "vertical"\nmass = "65 kg"\n'
-    text += '[[body]]\nname = "block"\nkind = "mass"\nmass = "6 kg"\n'
-    assert refused(text, folder).startswith("study: nothing carries the load on `deck.z`")
-    text += '[[link]]\nname = "odd"\nkind = "spring"\nbetween = ["deck", "block"]\nrate = "1 N/m"\n'
-    assert "link `odd` leaves `block` without first-order coupling" in refused(text, folder)
+    deck = '[[body]]\nname = "deck"\nkind = "mass"\nmoves = "vertical"\nmass = "65 kg"\n'
+    sag = '[[objective]]\nkind = "sag"\nbody = "deck"\nat_most = "1 mm"\n'
+    assert refused(deck + sag, folder).startswith("study: nothing carries the load on `deck.z`")
+    block = '[[body]]\nname = "block"\nkind = "mass"\nmass = "6 kg"\n'
+    link = '[[link]]\nname = "odd"\nkind = "spring"\nbetween = ["deck", "block"]\nrate = "1 N/m"\n'
+    assert "link `odd` leaves `block` without first-order coupling" in refused(deck + block + link, folder)
 
 
 @pytest.mark.parametrize(

@@ -1,0 +1,108 @@
+"""The page and the tables: the numbers are there, and hostile names are only text."""
+
+from dataclasses import replace
+from html.parser import HTMLParser
+from pathlib import Path
+
+import pytest
+
+from inverse import load_study
+from inverse.report.charts import frequency_chart
+from inverse.report.page import render_page
+from inverse.report.tables import objectives_table, window_bar
+from inverse.study.result import ObjectiveRow
+
+STUDIES = Path(__file__).parents[3] / "studies"
+VOID = {"meta", "line", "rect", "br"}
+
+
+class Balanced(HTMLParser):
+    """Collects text and checks that every element is closed."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.open: list[str] = []
+        self.text: list[str] = []
+        self.tags: set[str] = set()
+
+    def handle_starttag(self, tag, attrs):
+        self.tags.add(tag)
+        if tag not in VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self.tags.add(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        self.text.append(data)
+
+
+def read(page: str) -> Balanced:
+    parser = Balanced()
+    parser.feed(page)
+    assert parser.open == []
+    return parser
+
+
+@pytest.mark.parametrize("name", ["lantern_pair", "sieve", "bench", "gantry"])
+def test_page_is_self_contained_and_says_the_answer(name):
+    study = load_study(STUDIES / f"{name}.toml")
+    result = study.size()
+    page = render_page(result, study.text)
+    parsed = read(page)
+    text = " ".join(parsed.text)
+    assert "script" not in parsed.tags
+    assert "http" not in page
+    assert "Every objective is met." in text
+    for row in result.objectives:
+        assert row.label in text
+    assert study.title in text
+    assert "local codes" in text
+    assert len(page) < 200_000
+
+
+HOSTILE = ["<script>alert(1)</script>", "\"' onload='x", "‮gnp.exe", "x" * 1000, "&amp; {{ 7*7 }}"]
+
+
+@pytest.mark.parametrize("name", HOSTILE, ids=["tag", "quotes", "direction", "long", "template"])
+def test_hostile_names_are_text(name):
+    result = load_study(STUDIES / "lantern_pair.toml").size()
+    design = result.design
+    rows = tuple(replace(row, label=name) for row in design.objectives)
+    modes = tuple(replace(mode, shape={name: (1.0,), "west": (-1.0,)}) for mode in design.modes)
+    components = {name: ("x",), "west": ("x",)}
+    changed = replace(design, objectives=rows, modes=modes, components=components)
+    hostile = replace(result, title=name, warnings=(name,), design=changed)
+    parsed = read(render_page(hostile, name))
+    assert "script" not in parsed.tags
+    assert name in "".join(parsed.text)
+    assert max(map(len, objectives_table(hostile.objectives).splitlines())) < 100
+
+
+def row(achieved: float) -> ObjectiveRow:
+    return ObjectiveRow(
+        kind="frequency",
+        label="f",
+        asked={"target": 10.0, "within": 1.0},
+        achieved=achieved,
+        unit="Hz",
+        met=True,
+        margin=0.0,
+    )
+
+
+def test_bar_shows_the_value_in_its_window():
+    assert window_bar(row(10.0)) == "···[···●···]···"
+    assert window_bar(row(2.0)).startswith("‹")
+    assert window_bar(row(20.0)).endswith("›")
+
+
+def test_chart_of_frequencies_names_bands_and_windows():
+    result = load_study(STUDIES / "sieve.toml").size()
+    chart = frequency_chart(result.modes, result.objectives)
+    assert chart.count('class="band"') == 1
+    assert chart.count('class="mode"') == len(result.modes)
+    assert 'role="img"' in chart

@@ -1,0 +1,135 @@
+"""The command line: exit status, what goes where, and nothing half written."""
+
+import json
+from pathlib import Path
+
+import pytest
+from click.testing import CliRunner
+
+from inverse.cli import main
+from inverse.study.archive import load_result, record_text
+
+STUDIES = Path(__file__).parents[2] / "studies"
+
+
+@pytest.fixture
+def run(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    return lambda *arguments: CliRunner().invoke(main, [str(a) for a in arguments])
+
+
+def impossible(folder: Path) -> Path:
+    """The lantern pair asked for a frequency its arms cannot reach."""
+    text = (STUDIES / "lantern_pair.toml").read_text(encoding="utf-8").replace('"0.36 Hz"', '"0.6 Hz"')
+    path = folder / "too_fast.toml"
+    path.write_text(text, encoding="utf-8")
+    return path
+
+
+def test_met_is_zero_and_leaves_its_files(run, tmp_path):
+    done = run("size", STUDIES / "lantern_pair.toml")
+    assert done.exit_code == 0, done.output
+    folder = tmp_path / "out/lantern_pair"
+    assert {p.name for p in folder.iterdir()} == {"result.json", "parts.csv", "report.html", "study.toml"}
+    record = json.loads((folder / "result.json").read_text(encoding="utf-8"))
+    assert record["status"] == "met"
+    assert record["variables"]["arm"]["unit"] == "m"
+    assert set(record["evaluations"]) == {"modal_solves", "wall_s"}
+    assert (folder / "parts.csv").read_text().startswith("part,dimension,value,unit,tolerance,stock part number\n")
+
+
+def test_not_met_is_one_and_says_what_would_do(run, tmp_path):
+    done = run("size", impossible(tmp_path))
+    assert done.exit_code == 1
+    assert "open the range of `arm` down to" in done.output
+
+
+def test_faults_of_the_file_are_two_with_one_line_and_no_folder(run, tmp_path):
+    (tmp_path / "bad.toml").write_text("title = 3", encoding="utf-8")
+    done = run("size", "bad.toml")
+    assert done.exit_code == 2
+    assert "Traceback" not in done.output
+    assert not (tmp_path / "out").exists()
+    assert run("size", "missing.toml").exit_code == 2
+    assert run("size").exit_code == 2
+    assert run("nonsense").exit_code == 2
+
+
+def test_a_variable_without_value_is_named(run):
+    done = run("modes", STUDIES / "lantern_pair.toml")
+    assert done.exit_code == 2
+    assert "no value for `arm`" in done.output
+    assert "--design" in done.output
+
+
+def test_json_prints_the_record_and_nothing_else(run, tmp_path):
+    done = run("size", STUDIES / "lantern_pair.toml", "--json")
+    assert done.output == (tmp_path / "out/lantern_pair/result.json").read_text(encoding="utf-8")
+    json.loads(done.output)
+
+
+def test_quiet_prints_nothing(run):
+    assert run("size", STUDIES / "lantern_pair.toml", "--quiet").output == ""
+
+
+def test_modes_takes_the_design_of_an_earlier_run(run, tmp_path):
+    assert run("size", STUDIES / "lantern_pair.toml", "--out", "first", "--quiet").exit_code == 0
+    assert run("modes", STUDIES / "lantern_pair.toml", "--design", "first", "--out", "second").exit_code == 0
+    one, two = load_result("first"), load_result("second")
+    assert one.variables == two.variables
+    assert [m.number for m in two.modes] == [1, 2]
+
+
+def test_report_makes_the_page_again(run, tmp_path):
+    run("size", STUDIES / "lantern_pair.toml", "--out", "first", "--quiet")
+    page = tmp_path / "first/report.html"
+    before = page.read_bytes()
+    page.unlink()
+    assert run("report", "first").exit_code == 0
+    assert page.read_bytes() == before
+
+
+def test_a_result_reads_back_as_it_was(run, tmp_path):
+    run("size", STUDIES / "pump_train.toml", "--out", "first", "--quiet")
+    text = (tmp_path / "first/result.json").read_text(encoding="utf-8")
+    assert record_text(load_result("first")) == text
+
+
+@pytest.mark.parametrize("damage", ["", "{}", "[1]", '{"status": "met"', "\x00"])
+def test_a_damaged_result_is_refused(run, tmp_path, damage):
+    (tmp_path / "result.json").write_text(damage, encoding="utf-8")
+    done = run("report", tmp_path)
+    assert done.exit_code == 2
+    assert "no result file" in done.output
+
+
+def test_a_folder_that_cannot_be_made_is_a_fault_of_the_command(run, tmp_path):
+    (tmp_path / "taken").write_text("a file")
+    done = run("size", STUDIES / "lantern_pair.toml", "--out", "taken/inside")
+    assert done.exit_code == 2
+    assert "cannot write" in done.output
+
+
+def test_internal_faults_are_three_and_keep_their_traceback_for_debug(run, monkeypatch):
+    import inverse.study.study
+
+    def broken(*_, **__):
+        raise RuntimeError("nothing to see")
+
+    monkeypatch.setattr(inverse.study.study.Study, "size", broken)
+    done = run("size", STUDIES / "lantern_pair.toml")
+    assert done.exit_code == 3
+    assert "internal fault: RuntimeError: nothing to see" in done.output
+    assert isinstance(run("size", STUDIES / "lantern_pair.toml", "--debug").exception, RuntimeError)
+
+
+def test_schema_is_json(run):
+    assert json.loads(run("schema").output)["type"] == "object"
+
+
+def test_version_is_that_of_the_package():
+    from importlib.metadata import version
+
+    from inverse.study.study import VERSION
+
+    assert version("modewright") == VERSION
