@@ -202,9 +202,9 @@ class Result:
                         "damping ratio [1]": m.damping_ratio,
                     }
                     | {
-                        f"{body} {i + 1}" if len(u) > 1 else body: v
+                        f"{body}.{axis}": v
                         for body, u in m.shape.items()
-                        for i, v in enumerate(u)
+                        for axis, v in zip(design.components[body], u, strict=True)
                     }
                     for m in design.modes
                 ]

@@ -55,12 +55,7 @@ class Wishes:
                 objectives.append(objective)
         return tuple(objectives)
 
-    def _objective(
-        self,
-        table: Any,
-        where: str,
-        conditions: tuple[str, ...],
-    ) -> Objective | None:
+    def _objective(self, table: Any, where: str, conditions: tuple[str, ...]) -> Objective | None:
         before = len(self.names.problems.lines)
         kind: type[Any]
         rest: dict[str, Any]
@@ -146,7 +141,7 @@ class Wishes:
         margin = table.margin or Window(0.0, relative=True)
         owners = tuple(self.names.owner(where, "driven_by", name) for name in table.driven_by or ())
         widened = merged([_widened(band, margin) for band in bands])
-        # Neither met nor missed by a window of its own: the distance must not be negative.
+        # What it measures is the distance from the bands, which must not be negative.
         return subject, {"requirement": AtLeast(0.0), "bands": widened, "driven_by": owners}
 
     def _transfer(self, where: str, table: schema.Transfer) -> tuple[str, dict[str, Any]]:
@@ -159,26 +154,16 @@ class Wishes:
 
     def _nodal_point(self, where: str, table: schema.NodalPoint) -> tuple[str, dict[str, Any]]:
         self.names.check_axis(where, table.body, table.axis)
-        translations = {
-            name: tuple(c for c in own if c.rpartition(".")[2] in TRANSLATIONS)
+        axes = TRANSLATIONS if table.axis is None else (table.axis,)
+        counted = {
+            name: tuple(component for component in own if component.rpartition(".")[2] in axes)
             for name, own in self.names.components.items()
         }
-        bodies = {name: own for name, own in translations.items() if own}
-        if table.axis is None:
-            own = bodies.get(table.body, ())
-            if self.names.components.get(table.body) and not own:
-                self.names.problems.add(
-                    where, "axis", "the axis of a body that only turns", "none", 'such as axis = "r"'
-                )
-        else:
-            own = (f"{table.body}.{table.axis}",)
-            if table.axis not in TRANSLATIONS:
-                turning = {
-                    n: tuple(c for c in cs if c.endswith(f".{table.axis}")) for n, cs in self.names.components.items()
-                }
-                bodies = {name: cs for name, cs in turning.items() if cs}
+        bodies = {name: own for name, own in counted.items() if own}
+        if self.names.components.get(table.body) and table.axis is None and table.body not in bodies:
+            self.names.problems.add(where, "axis", "the axis of a body that only turns", "none", 'such as axis = "r"')
         subject = f"{_mode_words(table.mode)} {table.body} {table.axis or ''}".strip()
-        return subject, {"mode": self._mode(where, table.mode), "own": own, "bodies": bodies}
+        return subject, {"mode": self._mode(where, table.mode), "own": bodies.get(table.body, ()), "bodies": bodies}
 
     def _sag(self, where: str, table: schema.Sag) -> Sag:
         of = self._sagging_link(where, table.link) if table.link else self._sagging_body(where, table)

@@ -164,6 +164,13 @@ def test_objectives_measure_what_is_asked(content):
     assert {"east", "feet", "bottom", "n1"} <= set(of["total mass"].parts)
 
 
+def test_along_an_axis_only_displacements_along_it_are_compared(everything, folder):
+    text = everything.replace('body = "bench"\nat_most = 0.2', 'body = "bench"\naxis = "z"\nat_most = 0.2', 1)
+    (node,) = (o for o in parse_study(text, folder, "z").objectives if o.label == "nodal point 1 bench z")
+    assert node.own == ("bench.z",)
+    assert node.bodies == {name: (f"{name}.z",) for name in ("deck", "stage", "bench", "tip")}
+
+
 def test_margins_move_the_edges_of_bands_outward(content):
     """13.5 to 16.5 Hz with 5 %; first and second order of 1420 to 1500 rpm with 1 Hz."""
     one, two = (o for o in content.objectives if o.kind == "keep out")

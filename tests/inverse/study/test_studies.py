@@ -69,6 +69,17 @@ def test_python_example_of_the_readme(tmp_path, monkeypatch, capsys):
     assert (tmp_path / "out/lantern_pair/result.json").exists()
 
 
+def test_tables_as_data_frames():
+    result = load_study(ROOT / "studies/cart.toml").size()
+    frame = result.to_frame("modes")
+    assert list(frame.columns) == ["number", "frequency [Hz]", "damping ratio [1]", "cart.z", "cart.ry"]
+    assert result.to_frame("objectives")["met"].tolist() == [True, True]
+    assert result.to_frame("dimensions").set_index("name").loc["cart.mass", "value"] == 420.0
+    assert result.to_frame("variables")["unit"].tolist() == ["N/m", "N/m"]
+    with pytest.raises(ValueError, match="no table `nonsense`"):
+        result.to_frame("nonsense")
+
+
 def test_readme_shows_what_the_command_prints(tmp_path, monkeypatch):
     from click.testing import CliRunner
 
