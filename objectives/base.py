@@ -38,9 +38,10 @@ class Target:
 
 @dataclass(frozen=True, slots=True)
 class AtLeast:
-    """Met from `value` upward."""
+    """Met from `value` upward; rounding on the edge is measured by `scale`, by default the value itself."""
 
     value: float
+    scale: float | None = None
 
     def margin(self, measured: Array) -> Array:
         """Distance above the limit."""
@@ -48,7 +49,7 @@ class AtLeast:
 
     def slack(self) -> float:
         """What rounding may cost on the edge."""
-        return EDGE_SLACK * abs(self.value)
+        return EDGE_SLACK * abs(self.value if self.scale is None else self.scale)
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,9 +139,10 @@ class Objective(ABC):
         ----------
         state : State
             The builds.
-        choice : ndarray of int, shape (B,), optional
-            For wishes that can be met in several ways, which way each build goes for; None lets
-            each build go the way it is nearest to.
+        choice : ndarray of int, optional
+            For wishes that can be met in several ways, which way each build goes for; None lets each
+            build go the way it is nearest to. Only `KeepOut` has such ways: shape (B, bands), how many
+            modes lie below each band.
         """
         return pursue_measure(self.requirement, self.measure(state))
 

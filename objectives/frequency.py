@@ -7,7 +7,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from objectives.base import AtLeast, AtMost, Objective, Pursuit, Target, nothing, pursue_measure, scaled
+from objectives.base import AtLeast, AtMost, Objective, Pursuit, Requirement, Target, nothing, pursue_measure, scaled
 from objectives.state import Array, Eigenvalues, IntArray, Measured, ModeReference, State
 
 TURN = 2 * np.pi
@@ -53,17 +53,17 @@ def logarithm(m: Measured, against: float) -> Measured:
     return Measured(values, gradient)
 
 
-def pursue_logarithm(objective: Objective, m: Measured) -> Pursuit:
+def pursue_logarithm(requirement: Requirement, m: Measured) -> Pursuit:
     """Residuals in the logarithm of a positive measure: starts may be far off, and near the target it is linear."""
     none = nothing(len(m.values))
-    match objective.requirement:
+    match requirement:
         case Target(value, within) if value > 0:
             return Pursuit(scaled(logarithm(m, value), value / within), none)
         case AtLeast(value) if value > 0:
             return Pursuit(none, logarithm(m, value))
         case AtMost(value) if value > 0:
             return Pursuit(none, scaled(logarithm(m, value), -1.0))
-        case requirement:
+        case _:
             return pursue_measure(requirement, m)
 
 
@@ -74,6 +74,33 @@ def side_by_side(parts: list[Measured]) -> Measured:
         np.concatenate([m.values for m in parts], axis=1),
         {quantity: np.concatenate([m.gradient[quantity] for m in parts], axis=1)},
     )
+
+
+def one_mode(state: State, mode: ModeReference) -> Measured:
+    """The frequency of a mode."""
+    one = tone(state, state.index(mode))
+    return measured(state, one.f, (one, 1.0))
+
+
+def implied(mode: ModeReference, upward: bool, state: State) -> list[Measured]:
+    """Frequencies of the modes on which a limit on one mode puts the same limit, at most `NEIGHBOURS` with it.
+
+    Mode j at or above a limit says it of all that follow, at or below it of all before. Where two of them meet,
+    sorted frequencies have a kink, and a solver that sees only one runs into it; with the neighbours it sees every
+    active piece, and no design is excluded that was not before. Their number depends on the assembly alone.
+    """
+    if not isinstance(mode, int):
+        return []
+    count, step = state[Eigenvalues()].shape[1] - state.rigid, 1 if upward else -1
+    following = range(mode + step, mode + step * NEIGHBOURS, step)
+    return [one_mode(state, other) for other in following if 0 < other <= count]
+
+
+def modes_below(mode: ModeReference, upward: bool) -> int | None:
+    """Oscillating modes from the lowest that a limit on a mode looks at."""
+    if not isinstance(mode, int):
+        return None
+    return mode + NEIGHBOURS - 1 if upward else mode
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -90,28 +117,21 @@ class Frequency(Objective):
         """The mode it names."""
         return (self.mode,)
 
+    @property
+    def modes_needed(self) -> int | None:
+        """Up to the mode, for a lower limit a few more."""
+        return modes_below(self.mode, isinstance(self.requirement, AtLeast))
+
     def measure(self, state: State) -> Measured:
         """The frequency of the mode."""
-        one = tone(state, state.index(self.mode))
-        return measured(state, one.f, (one, 1.0))
+        return one_mode(state, self.mode)
 
     def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
-        """In the logarithm; a limit is also put on the neighbours for which it is implied.
-
-        Mode j above a limit implies it for all following ones. Where two of them meet, single
-        frequencies have a kink, and a solver that sees only one of them runs into it.
-        """
-        pursuit = pursue_logarithm(self, self.measure(state))
-        if not isinstance(self.mode, int) or not isinstance(self.requirement, AtLeast | AtMost):
-            return pursuit
-        step = 1 if isinstance(self.requirement, AtLeast) else -1
-        count = state[Eigenvalues()].shape[1] - state.rigid
-        parts = [pursuit.positive]
-        for mode in range(self.mode + step, self.mode + step * NEIGHBOURS, step):
-            if 0 < mode <= count:
-                one = tone(state, state.index(mode))
-                parts.append(pursue_logarithm(self, measured(state, one.f, (one, 1.0))).positive)
-        return Pursuit(pursuit.equal, side_by_side(parts))
+        """In the logarithm; a limit is also put on the neighbours for which it is `implied`."""
+        tones = [self.measure(state)]
+        if isinstance(self.requirement, AtLeast | AtMost):
+            tones += implied(self.mode, isinstance(self.requirement, AtLeast), state)
+        return pursue_logarithm(self.requirement, side_by_side(tones))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -128,14 +148,26 @@ class Period(Objective):
         """The mode it names."""
         return (self.mode,)
 
+    @property
+    def modes_needed(self) -> int | None:
+        """Up to the mode, for an upper limit a few more."""
+        return modes_below(self.mode, isinstance(self.requirement, AtMost))
+
     def measure(self, state: State) -> Measured:
         """The period of the mode."""
-        one = tone(state, state.index(self.mode))
-        return measured(state, 1 / one.f, (one, -1 / one.f**2))
+        return _inverse(one_mode(state, self.mode))
 
     def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
-        """In the logarithm."""
-        return pursue_logarithm(self, self.measure(state))
+        """In the logarithm; a limit is also put on the neighbours for which it is `implied`."""
+        tones = [one_mode(state, self.mode)]
+        if isinstance(self.requirement, AtLeast | AtMost):
+            tones += implied(self.mode, isinstance(self.requirement, AtMost), state)
+        return pursue_logarithm(self.requirement, _inverse(side_by_side(tones)))
+
+
+def _inverse(m: Measured) -> Measured:
+    """``1/value``, of positive values."""
+    return Measured(1 / m.values, {q: -g / m.values[:, :, None] ** 2 for q, g in m.gradient.items()})
 
 
 def splitting(state: State, between: tuple[ModeReference, ModeReference]) -> tuple[Array, Tone, Tone]:
@@ -196,7 +228,8 @@ class BeatPeriod(Objective):
             case Target(T, within):
                 return Pursuit(scaled(m, T**2 / within, 1 / T), none)
             case AtLeast(T):
-                return Pursuit(none, scaled(m, -T, 1 / T))
+                # Of modes named by shape the second may be the lower one: that is no longer beat, but none.
+                return Pursuit(none, side_by_side([scaled(m, -T, 1 / T), scaled(m, T)]))
             case AtMost(T):
                 return Pursuit(none, scaled(m, T, 1 / T))
             case requirement:
@@ -225,4 +258,4 @@ class FrequencyRatio(Objective):
 
     def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
         """In the logarithm."""
-        return pursue_logarithm(self, self.measure(state))
+        return pursue_logarithm(self.requirement, self.measure(state))

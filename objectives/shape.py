@@ -8,7 +8,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from objectives.base import Objective, Pursuit, Target, nothing, scaled
+from objectives.base import AtMost, Objective, Pursuit, Target, nothing, scaled
 from objectives.state import (
     Array,
     Displacement,
@@ -73,7 +73,9 @@ class Shape(Objective):
 class NodalPoint(Objective):
     """Displacement of a body over the greatest of any body in the mode, 0 to 1.
 
-    `own` are the components of the body that count, `bodies` the translations of every body.
+    `own` are the components of the body that count; `bodies` those of every body that are compared with it,
+    translations or, where a rotation is asked about, that rotation. A mode in which none of them moves has no
+    such ratio.
     """
 
     kind: ClassVar[str] = "nodal point"
@@ -89,36 +91,60 @@ class NodalPoint(Objective):
         return (self.mode,)
 
     def measure(self, state: State) -> Measured:
-        """The ratio of lengths; its gradient is that of the body that moves most."""
-        index = state.index(self.mode)
-        parts = [self.own, *self.bodies.values()]
-        lengths = np.stack([_length(state, part, index) for part in parts], axis=1)
-        greatest = lengths[:, 1:].argmax(axis=1)
-        top = lengths[np.arange(state.builds), 1 + greatest]
-        value = lengths[:, 0] / top
-        gradient: Gradient = {}
-        for i, part in enumerate(parts):
-            active = np.ones(state.builds) / top if i == 0 else -value / top * (greatest == i - 1)
-            for component in part:
-                u = at_mode(state[Displacement(component)], index)
-                slope = active * u / np.where(lengths[:, i] > 0, lengths[:, i], 1.0)
-                gradient[Displacement(component)] = gradient.get(Displacement(component), 0.0) + in_place(
-                    state, index, slope
-                )
-        return Measured(value[:, None], gradient)
+        """The ratio of lengths; compared with the body that moves most; no slope where the body stands still."""
+        return self._ratio(state, *_length(state, self.own, state.index(self.mode)))
 
     def pursue(self, state: State, choice: IntArray | None = None) -> Pursuit:
-        """A target on one axis is pursued with its sign, for the size has a kink where it is zero."""
-        if not isinstance(self.requirement, Target) or len(self.own) > 1:
+        """Along one axis a still body and an upper limit are pursued with the sign, for the size has a kink at zero.
+
+        The sign is that of the mode, which is arbitrary; a limit is put on both sides.
+        """
+        if len(self.own) > 1:
             return Objective.pursue(self, state)
-        m = self.measure(state)
-        sign = np.sign(at_mode(state[Displacement(self.own[0])], state.index(self.mode)))
-        signed = Measured(m.values * sign[:, None], {q: g * sign[:, None, None] for q, g in m.gradient.items()})
-        return Pursuit(scaled(signed, 1 / self.requirement.within, self.requirement.value), nothing(state.builds))
+        index, none = state.index(self.mode), nothing(state.builds)
+        signed = self._ratio(state, at_mode(state[Displacement(self.own[0])], index), np.ones((state.builds, 1)))
+        match self.requirement:
+            case Target(0.0, within):
+                return Pursuit(scaled(signed, 1 / within), none)
+            case AtMost(value) if value > 0:
+                sides = [scaled(signed, side / value) for side in (-1.0, 1.0)]
+                return Pursuit(
+                    none,
+                    Measured(
+                        1 + np.concatenate([m.values for m in sides], axis=1),
+                        {q: np.concatenate([m.gradient[q] for m in sides], axis=1) for q in signed.gradient},
+                    ),
+                )
+            case _:
+                return Objective.pursue(self, state)
+
+    def _ratio(self, state: State, size: Array, slope: Array) -> Measured:
+        """A size of the body (B,), with its slope (B, own) over its components, over the length of what moves most."""
+        index, rows = state.index(self.mode), np.arange(state.builds)
+        lengths, slopes = zip(*(_length(state, part, index) for part in self.bodies.values()), strict=True)
+        greatest = np.argmax(lengths, axis=0)
+        top = np.asarray(lengths)[greatest, rows]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            value = size / top
+        gradient: Gradient = {}
+
+        def add(components: tuple[str, ...], slope: Array) -> None:
+            for i, component in enumerate(components):
+                quantity = Displacement(component)
+                gradient[quantity] = gradient.get(quantity, 0.0) + in_place(state, index, slope[:, i] / top)
+
+        with np.errstate(divide="ignore", invalid="ignore"):
+            add(self.own, slope)
+            for body, part in enumerate(self.bodies.values()):
+                add(part, -(value * (greatest == body))[:, None] * slopes[body])
+        return Measured(value[:, None], gradient)
 
 
-def _length(state: State, components: tuple[str, ...], index: IntArray) -> Array:
-    return np.asarray(np.linalg.norm([at_mode(state[Displacement(c)], index) for c in components], axis=0))
+def _length(state: State, components: tuple[str, ...], index: IntArray) -> tuple[Array, Array]:
+    """Length of a displacement (B,), and its slope over each component (B, s); zero where it is still."""
+    u = np.stack([at_mode(state[Displacement(c)], index) for c in components], axis=1)
+    length = np.linalg.norm(u, axis=1)
+    return length, u / np.where(length > 0, length, 1.0)[:, None]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

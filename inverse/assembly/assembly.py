@@ -181,19 +181,20 @@ class Assembly:
     def _hung_in_order(self, bodies: dict[str, Body]) -> list[Body]:
         """Bodies with every pendulum after what it hangs from."""
         ordered: dict[str, Body] = {}
-
-        def visit(body: Body, above: tuple[str, ...]) -> None:
-            if body.name in above:
-                raise ModelError(f"`hung_from` runs in a circle: {' → '.join((*above, body.name))}")
-            parent = body.hung_from if isinstance(body, Pendulum) else None
-            if parent is not None:
+        for body in bodies.values():
+            above: dict[str, Body] = {}
+            while body.name not in ordered:
+                if body.name in above:
+                    circle = " → ".join((*above, body.name))
+                    raise ModelError(f"`hung_from` runs in a circle: {circle}")
+                above[body.name] = body
+                parent = body.hung_from if isinstance(body, Pendulum) else None
+                if parent is None:
+                    break
                 if parent not in bodies:
                     raise ModelError(f"pendulum `{body.name}` hangs from `{parent}`, which is not a body")
-                visit(bodies[parent], (*above, body.name))
-            ordered.setdefault(body.name, body)
-
-        for body in bodies.values():
-            visit(body, ())
+                body = bodies[parent]
+            ordered.update(reversed(above.items()))
         return list(ordered.values())
 
     def _nominal(self, register: Register, book: Book) -> dict[str, float]:

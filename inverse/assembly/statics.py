@@ -20,6 +20,9 @@ from inverse.errors import ModelError
 RANK_TOLERANCE = 1e-10
 """Below this share of the greatest singular value a normalised row adds nothing to the rank."""
 
+LARGEST_CHECK = 300
+"""Up to this many coordinates it is checked that weights are carried, even where no force at rest is needed."""
+
 LARGEST_NULL_SPACE = 1500
 """Beyond this many coordinates no basis of the unresisted motions is computed: there must be none."""
 
@@ -59,6 +62,10 @@ def settle(book: Book, nominal: dict[str, float], sags: Sequence[Deflection]) ->
             inner = (*(load.rate * term for term in stretched), *((load.preload,) if load.preload else ()))
             vanishing = (symbol(load.name), *(-load.sign * term for term in inner))
             book.definitions.append(Definition(load.name, False, (), 1.0, vanishing))
+    elif book.weight and len(carried := _carried(book)) <= LARGEST_CHECK:
+        rows = [square.row for square in book.stiffness if set(square.row) & set(carried)]
+        pushes = [(W, row) for _, W, row in book.weight]
+        _refuse_unsupported(book, unresisted(rows, carried, nominal), carried, pushes, nominal)
     for sag in sags:
         names = {c: settlement(c, sag.case) for c in book.coordinates}
         if sag.case is not None:

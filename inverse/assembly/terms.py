@@ -22,6 +22,7 @@ import scipy.sparse as sp
 from numpy.typing import NDArray
 
 from inverse.assembly.algebra import Monomial, Polynomial, Square
+from inverse.errors import ModelError
 
 Array = NDArray[np.float64]
 IntArray = NDArray[np.intp]
@@ -82,7 +83,7 @@ class Monomials:
 
         Raises
         ------
-        ValueError
+        ModelError
             If a dimension that may be zero or negative has a power that is not a whole number ≥ 0.
         """
         rows, columns, powers = [], [], []
@@ -94,7 +95,7 @@ class Monomials:
                     columns.append(index[name])
                     powers.append(power)
                 elif power < 0 or power != int(power):
-                    raise ValueError(f"{name} may be zero or negative and cannot have power {power}")
+                    raise ModelError(f"`{name}` may be zero or negative and cannot have the power {power:g}")
                 else:
                     signed.setdefault(i, []).append((index[name], int(power)))
         shape = (len(monomials), len(positive))

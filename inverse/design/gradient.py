@@ -18,7 +18,7 @@ import numpy as np
 
 from inverse.assembly.terms import Array, IntArray
 from inverse.design.constrained import Evaluated, constrained_minimum
-from inverse.design.population import PopulationResult, Stop, solve_population
+from inverse.design.population import Budget, PopulationResult, Stop, solve_population
 from inverse.design.problem import Problem
 from inverse.evaluation.evaluator import Choices, Evaluation
 from objectives.base import Maximise
@@ -38,6 +38,9 @@ DISTINCT = 1e-4
 
 SAMPLES = 64
 """Random designs looked at to see on which sides of a band the modes can lie."""
+
+LATER = Budget(evaluations=60_000)
+"""What each attempt after the first may cost."""
 
 MOST_CHOICES = 12
 """Ways of passing keep-out bands that are tried one by one after the nearest."""
@@ -100,6 +103,7 @@ class _Attempt:
     words: str
     share: float | None
     choices: dict[int, IntArray] | None
+    budget: Budget
 
     def run(self, problem: Problem, rng: np.random.Generator, starts: int, wanted: int) -> PopulationResult:
         def residuals(t: Array) -> tuple[Array, Array]:
@@ -116,18 +120,19 @@ class _Attempt:
             first=first,
             wanted=wanted,
             tolerance=EXACT,
+            budget=self.budget,
         )
 
 
 def _attempts(problem: Problem, rng: np.random.Generator) -> Iterator[_Attempt]:
     """From what is most wanted to what is more lenient; the ways past bands in the order they occur."""
-    yield _Attempt("hitting every target", None, None)
+    yield _Attempt("hitting every target", None, None, Budget())
     choices = list(_choices(problem, rng))
     for choice in choices:
-        yield _Attempt("hitting every target, modes on other sides of the bands", None, choice)
-    yield _Attempt("entering every window", INSIDE, None)
+        yield _Attempt("hitting every target, modes on other sides of the bands", None, choice, LATER)
+    yield _Attempt("entering every window", INSIDE, None, LATER)
     for choice in choices:
-        yield _Attempt("entering every window, modes on other sides of the bands", INSIDE, choice)
+        yield _Attempt("entering every window, modes on other sides of the bands", INSIDE, choice, LATER)
 
 
 def _choices(problem: Problem, rng: np.random.Generator) -> Iterator[dict[int, IntArray]]:

@@ -206,7 +206,7 @@ class _Archive:
 
         Of three kinds in equal shares: one or two variables drawn anew; all variables shifted,
         by 2 to 40 % of their ranges; up to 30 % of the variables taken from another point, and
-        all shifted a little. Each kind alone gets stuck on some family of problems.
+        all shifted a little. Together they were never worse than one kind alone on the families tried.
         """
         shape = (count, self.points.shape[1])
         parents = self.points[rng.integers(len(self.costs), size=count)]

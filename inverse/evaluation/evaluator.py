@@ -38,16 +38,17 @@ class Evaluator:
 
     def at(self, x: Array) -> Evaluation:
         """A batch of designs, shape (B, P) or (P,)."""
-        return self.of_dimensions(self._nominal(np.atleast_2d(x)), np.atleast_2d(x))
+        return self.of_dimensions(self.nominal(np.atleast_2d(x)), np.atleast_2d(x))
 
     def of_dimensions(self, base: Array, x: Array) -> Evaluation:
         """Builds whose base dimensions (B, D) are not, or not exactly, those their variables ask for."""
         matrices = Matrices(self.model, at_rest(self.model, base))
         self.modal_solves += len(base)
-        state = BuildState(matrices, self._likes, self.modes_needed, self._rigid, self._changes(x))
+        state = BuildState(matrices, self._likes, self.modes_needed, self.rigid, self._changes(x))
         return Evaluation(self, x, state)
 
-    def _nominal(self, x: Array) -> Array:
+    def nominal(self, x: Array) -> Array:
+        """Base dimensions (B, D) that variables (B, P) ask for."""
         parameters = self.model.parameters
         return parameters.nominal.values(parameters.variable_point(x))
 
@@ -62,10 +63,10 @@ class Evaluator:
         return tuple(dict.fromkeys(like for objective in self.objectives for like in objective.likes))
 
     @cached_property
-    def _rigid(self) -> int:
+    def rigid(self) -> int:
         """Rigid modes at a generic point; a design where the count differs is recounted when reported."""
         x = np.array([[_generic(v.low, v.high, k) for k, v in enumerate(self.model.parameters.variables)]])
-        matrices = Matrices(self.model, at_rest(self.model, self._nominal(x)))
+        matrices = Matrices(self.model, at_rest(self.model, self.nominal(x)))
         if not np.isfinite(matrices.a).all():
             return 0
         return count_rigid(matrices.stiffness.sparse_rows(), matrices.stiffness.weights[0])

@@ -40,11 +40,10 @@ def at_rest(model: Model, base: Array) -> Point:
         Shape (B, D + dependents); NaN for a build that has no rest position.
     """
     dependents = model.dependents
-    free = np.ones((len(base), len(dependents)))
-    point = Point(np.hstack([base, free]), model.positive)
     if not len(dependents):
-        return point
+        return Point(base, model.positive)
     first = base.shape[1]
+    point = Point(np.hstack([base, np.ones((len(base), len(dependents)))]), model.positive)
     # Seeds name at most one level of earlier seeds (directions need lengths), so twice is enough.
     for _ in range(2):
         seeds = dependents.seeds.values(dependents.table.values(point))
@@ -60,23 +59,29 @@ def _with(point: Point, first: int, dependent: Array) -> Point:
 
 
 def _newton(model: Model, point: Point, first: int) -> Point:
+    """Solve for the dependent dimensions of every build, each until its own steps no longer shrink."""
     dependents, positive = model.dependents, model.positive[first:]
-    before = np.full(point.builds, np.inf)
+    values = point.values
+    left, before = np.arange(point.builds), np.full(point.builds, np.inf)
     for _ in range(NEWTON_STEPS):
-        y = point.values[:, first:]
-        residual = dependents.vanishing.values(dependents.table.values(point))
-        step = -RestSlopes(model, point).solve(residual[:, None, :])[:, 0]
+        some = Point(values[left], point.positive)
+        y = some.values[:, first:]
+        residual = dependents.vanishing.values(dependents.table.values(some))
+        step = -RestSlopes(model, some).solve(residual[:, None, :])[:, 0]
         with np.errstate(over="ignore", invalid="ignore"):
             new = np.where(positive, y * np.exp(np.clip(step, -1, 1)), y + step)
-        point = _with(point, first, new)
+        values[left, first:] = new
         size = np.linalg.norm(step / _scale(new, positive), axis=1)
-        # Converged once steps no longer shrink: what is left is rounding.
+        # Steps that no longer shrink are rounding.
         done = (size <= NEWTON_TOLERANCE) | ((size <= STAGNATION) & (size >= before / 4))
-        if np.all(done | ~np.isfinite(size)):
+        lost = ~np.isfinite(size)
+        values[left[lost], first:] = np.nan
+        going = ~done & ~lost
+        left, before = left[going], size[going]
+        if not len(left):
             break
-        before = size
-    point.values[~done, first:] = np.nan
-    return point
+    values[left, first:] = np.nan
+    return Point(values, point.positive)
 
 
 def _scale(y: Array, positive: NDArray[np.bool_]) -> Array:

@@ -64,9 +64,7 @@ def somigliana_pizzetti(latitude, height):
 
 @pytest.mark.parametrize("latitude", [0, 30, 54.3, -54.3, 90])
 # Seen: 6e-9 at -500 m, 4e-12 at 0, 1.1e-8 at 1 km, 7.2e-8 at 10 km; the formula leaves out (h/a)³.
-@pytest.mark.parametrize(
-    ("height", "tolerance"), [(-500, 1e-8), (0, 1e-11), (1000, 2e-8), (10_000, 1e-7)]
-)
+@pytest.mark.parametrize(("height", "tolerance"), [(-500, 1e-8), (0, 1e-11), (1000, 2e-8), (10_000, 1e-7)])
 def test_gravity_with_height_is_near_the_exact_field_of_the_ellipsoid(latitude, height, tolerance):
     angle = math.radians(latitude)
     exact = somigliana_pizzetti(mpmath.mpf(angle), mpmath.mpf(height))

@@ -239,9 +239,7 @@ def test_compound_units_convert_as_in_a_general_library(pint_units, number, fact
 # ---------------------------------------------------------------- pure numbers and kinds
 
 
-@pytest.mark.parametrize(
-    ("given_", "value"), [(0.3, 0.3), (4, 4.0), ("0.25", 0.25), ("2 %", 0.02), ("50ppm", 5e-5)]
-)
+@pytest.mark.parametrize(("given_", "value"), [(0.3, 0.3), (4, 4.0), ("0.25", 0.25), ("2 %", 0.02), ("50ppm", 5e-5)])
 def test_a_pure_number_may_be_bare(given_, value):
     assert parse_quantity(given_, Kind.RATIO) == value
 
@@ -401,9 +399,7 @@ def test_a_quantity_that_cannot_be_read_is_explained(given_, kind, part):
 )
 def test_an_unknown_unit_brings_a_suggestion(symbol, suggestion):
     message = message_of(parse_quantity, f"3 {symbol}", Kind.LENGTH)
-    assert (
-        f"found the unknown unit '{symbol}' in '3 {symbol}'; did you mean {suggestion}" in message
-    )
+    assert f"found the unknown unit '{symbol}' in '3 {symbol}'; did you mean {suggestion}" in message
 
 
 def test_an_unknown_unit_that_cancels_is_still_unknown():

@@ -79,7 +79,11 @@ def chosen_objectives(values: np.ndarray) -> tuple[Objective, ...]:
         Frequency(requirement=AtLeast(0.99 * f[1]), label="", mode=2),
         Frequency(requirement=AtMost(1.01 * f[2]), label="", mode=3),
         Period(requirement=Target(1 / f[1], 0.012 / f[1]), label="", mode=2),
-        KeepOut(requirement=AtLeast(0.0), label="", bands=((f[1] * 1.012, f[2] * 0.988), (f[2] * 2, f[2] * 2.2))),
+        KeepOut(
+            requirement=AtLeast(0.0),
+            label="",
+            bands=(tuple(sorted((f[1] * 1.012, f[2] * 0.988))), (f[2] * 2, f[2] * 2.2)),
+        ),
         Splitting(requirement=Target(f[2] - f[1], 0.03 * (f[2] - f[1])), label="", between=(2, 3)),
         BeatPeriod(requirement=AtMost(1.02 / (f[1] - f[0])), label="", between=(1, 2)),
         FrequencyRatio(requirement=Target(f[2] / f[0], 0.01 * f[2] / f[0]), label="", between=(1, 3)),
