@@ -25,6 +25,7 @@ from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluation, Evaluator
 from inverse.study.content import SolveSettings, StudyContent
 from inverse.study.describe import describe, evaluated
+from inverse.study.remarks import remarks
 from inverse.study.result import Design, Result, Status
 from objectives.base import Objective
 
@@ -32,9 +33,6 @@ VERSION = "0.1.0"
 
 Progress = Callable[[str], None]
 """Called with a few words about what is being done."""
-
-MISREAD_UNIT = 1e5
-"""A frequency asked for that is off by more than this from all the model can reach is probably a slip of the unit."""
 
 
 def load_study(path: str | Path) -> Study:
@@ -77,6 +75,7 @@ class Study:
     title: str = ""
     text: str = ""
     warnings: tuple[str, ...] = ()
+    content: StudyContent | None = None
 
     @classmethod
     def from_content(cls, content: StudyContent) -> Study:
@@ -91,11 +90,14 @@ class Study:
             title=content.title,
             text=content.text,
             warnings=content.warnings,
+            content=content,
         )
 
     @cached_property
     def model(self) -> Model:
         """The assembly as tables of terms."""
+        if self.content is not None:
+            return self.content.model
         return self.assembly.compile(self.variables, self.deflections)
 
     def modes(self, design: Mapping[str, float] | None = None, *, seed: int | None = None) -> Result:
@@ -113,7 +115,7 @@ class Study:
         record = describe(evaluation)
         status = Status.MET if record.met else Status.NOT_MET
         message = _verdict(record) if self.objectives else "modes of the design as it stands"
-        return self._result("modes", status, message, record, evaluator, began, seed, route="evaluation")
+        return self._result("modes", status, message, record, evaluation, began, seed, route="evaluation")
 
     def size(self, *, seed: int | None = None, progress: Progress = lambda _: None) -> Result:
         """Find parts whose assembly does what the objectives ask.
@@ -163,7 +165,7 @@ class Study:
             status,
             _message(record, shortfall, verification, outcome),
             record,
-            problem.evaluator,
+            evaluation,
             began,
             seed,
             route="gradient" if len(problem.free) else "evaluation",
@@ -213,7 +215,7 @@ class Study:
         status: Status,
         message: str,
         record: Design,
-        evaluator: Evaluator,
+        evaluation: Evaluation,
         began: float,
         seed: int | None,
         **rest: Any,
@@ -226,8 +228,8 @@ class Study:
             message=message,
             seed=self._seed(seed),
             design=record,
-            warnings=(*self.warnings, *_doubts(evaluator, record)),
-            modal_solves=evaluator.modal_solves,
+            warnings=(*self.warnings, *remarks(evaluation, record)),
+            modal_solves=evaluation.evaluator.modal_solves,
             wall_s=time.perf_counter() - began,
             versions={
                 "modewright": VERSION,
@@ -263,19 +265,3 @@ def _message(record: Design, shortfall: Shortfall | None, verification: Verifica
     if shortfall.relaxations:
         parts.append("what would do: " + "; or ".join(shortfall.relaxations))
     return "; ".join(parts)
-
-
-def _doubts(evaluator: Evaluator, record: Design) -> tuple[str, ...]:
-    """Warnings that need the design: slips of a unit."""
-    doubts = []
-    frequencies = [mode.frequency_hz for mode in record.modes]
-    for row in record.objectives:
-        wanted = row.asked.get("target") or row.asked.get("at_least") or row.asked.get("at_most")
-        if row.unit != "Hz" or not wanted or not frequencies:
-            continue
-        low, high = min(frequencies), max(frequencies)
-        if wanted > MISREAD_UNIT * high or wanted < low / MISREAD_UNIT:
-            doubts.append(
-                f"`{row.label}` asks for {wanted:.4g} Hz, the modes are at {low:.4g} to {high:.4g} Hz: MHz or mHz?"
-            )
-    return tuple(doubts)
