@@ -56,8 +56,8 @@ def _transfers(evaluation: Evaluation) -> Iterator[str]:
         path = f"{objective.source} to {objective.target}"
         if found.at_end[0]:
             yield (
-                f"{path}: no maximum inside the horizon of {_time(float(found.horizon[0]))} reaches 90 % of the greatest "
-                "share; the end of the horizon was taken: give a longer `horizon`"
+                f"{path}: no maximum within the horizon of {_time(float(found.horizon[0]))} reaches 90 % of the "
+                "greatest share; the end of the horizon was taken: give a longer `horizon`"
             )
         elif found.near_switch[0]:
             yield f"{path}: another maximum is nearly as good; a small change of parts may make it the one that counts"
