@@ -1,8 +1,8 @@
 """Published tolerance classes: half-widths on a nominal length.
 
-Sources: ISO 2768-1 (general tolerances for linear dimensions, table 1) and ISO 286-1 (standard tolerance grades IT),
-values from memory, confirmed by the grade formula ``i = 0.45 D^(1/3) + 0.001 D`` (D in mm, i in µm) within rounding; confirm
-against the standards before ordering by them.
+Sources: ISO 2768-1 (general tolerances for linear dimensions, table 1) and ISO 286-1 (standard tolerance grades IT);
+values from memory, the grades confirmed by their formula ``i = 0.45 D^(1/3) + 0.001 D`` (D in mm, i in µm) within
+rounding. Confirm against the standards before ordering by them.
 """
 
 from __future__ import annotations
