@@ -105,6 +105,25 @@ def modes(study: Path, design: Path | None, out: Path | None, seed: int | None, 
 
 
 @main.command()
+@STUDY
+@click.option(
+    "--design",
+    type=click.Path(file_okay=False, path_type=Path),
+    help="Folder of an earlier result whose design is taken instead of the start values.",
+)
+@common
+@guarded
+def tolerance(study: Path, design: Path | None, out: Path | None, seed: int | None, as_json: bool, quiet: bool) -> int:
+    """Say what the tolerances of STUDY do to a design: share of builds that pass, worst builds, sensitivities."""
+    from inverse import load_study
+    from inverse.study.archive import load_result
+
+    loaded = load_study(study)
+    values = None if design is None else load_result(design).variables
+    return delivered(loaded.tolerance(values, seed=seed), loaded.text, out, as_json, quiet)
+
+
+@main.command()
 @click.argument("folder", type=click.Path(file_okay=False, path_type=Path))
 @click.option("--debug", is_flag=True, help="Show the traceback of a fault.")
 @guarded

@@ -140,15 +140,25 @@ class Evaluation:
         k = sum(m.values.shape[1] for m in equal)
         return values[:, :k], slopes[:, :k], values[:, k:], slopes[:, k:]
 
-    def _over_variables(self, parts: Sequence[Measured]) -> Array:
-        k = sum(part.values.shape[1] for part in parts)
-        parameters, d = self.evaluator.model.parameters, self.state.matrices.point.values
-        if k == 0:
-            return np.zeros((self.state.builds, 0, len(parameters.variables)))
-        slopes, first = Slopes(self.state, k), 0
+    def dimension_jacobian(self) -> Array:
+        """Derivatives of the measured values over the base dimensions themselves, shape (B, m, D)."""
+        parameters = self.evaluator.model.parameters
+        base = self.state.matrices.point.values[:, : len(parameters.dimensions)]
+        scale = np.where(parameters.positive, base, 1.0)
+        return np.asarray(self._collected(self.measured).over_dimensions() / scale[:, None, :])
+
+    def _collected(self, parts: Sequence[Measured]) -> Slopes:
+        slopes, first = Slopes(self.state, sum(part.values.shape[1] for part in parts)), 0
         for part in parts:
             slopes.add(part.gradient, first)
             first += part.values.shape[1]
+        return slopes
+
+    def _over_variables(self, parts: Sequence[Measured]) -> Array:
+        parameters, d = self.evaluator.model.parameters, self.state.matrices.point.values
+        slopes = self._collected(parts)
+        if slopes.k == 0:
+            return np.zeros((self.state.builds, 0, len(parameters.variables)))
         base = d[:, : len(parameters.dimensions)]
         over = parameters.pull(parameters.variable_point(self.x), base, slopes.over_dimensions())
         if slopes.by_change is not None:

@@ -87,6 +87,10 @@ def render_page(result: Result, study_text: str) -> str:
             }
             for row in result.objectives
         ],
+        worst=[
+            {"label": row["label"], "low": shown(row["low"], row["unit"]), "high": shown(row["high"], row["unit"])}
+            for row in (result.tolerance or {}).get("worst_case", ())
+        ],
         frequency_chart=Markup(frequency_chart(design.modes, result.objectives)),
         modes=[
             {

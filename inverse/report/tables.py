@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from typing import Any
 
 from inverse.study.result import Design, ObjectiveRow, Result
 from inverse.units import Kind, format_quantity, quantity_dimension
@@ -21,6 +22,8 @@ def summary(result: Result) -> str:
         blocks.append(objectives_table(result.objectives))
     if result.variables:
         blocks.append(variables_table(result))
+    if result.tolerance is not None:
+        blocks.append(worst_table(result.tolerance["worst_case"]))
     if result.command == "modes" or not result.objectives:
         blocks.append(modes_table(result.design))
     return "\n\n".join(blocks)
@@ -79,6 +82,13 @@ def variables_table(result: Result) -> str:
         unit = result.design.variable_units[name]
         others = [shown(design.variables[name], unit) for design in result.alternatives[:3]]
         table.append((name, shown(value, unit), *others))
+    return aligned(table)
+
+
+def worst_table(rows: Sequence[Mapping[str, Any]]) -> str:
+    """The farthest builds found within the tolerances."""
+    table = [("worst builds found", "lowest", "highest")]
+    table += [(row["label"], shown(row["low"], row["unit"]), shown(row["high"], row["unit"])) for row in rows]
     return aligned(table)
 
 

@@ -23,10 +23,12 @@ from inverse.design.shortfall import Shortfall, explain
 from inverse.design.verification import Verification, verify
 from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluation, Evaluator
-from inverse.study.content import SolveSettings, StudyContent
+from inverse.study.content import SolveSettings, StudyContent, Tolerance
 from inverse.study.describe import describe, evaluated
 from inverse.study.remarks import remarks
 from inverse.study.result import Design, Result, Status
+from inverse.study.workshop import errors_of, tolerance_record
+from inverse.tolerance.yields import measure_yield
 from objectives.base import Objective
 
 VERSION = "0.1.0"
@@ -75,6 +77,7 @@ class Study:
     title: str = ""
     text: str = ""
     warnings: tuple[str, ...] = ()
+    tolerances: tuple[Tolerance, ...] = ()
     content: StudyContent | None = None
 
     @classmethod
@@ -90,6 +93,7 @@ class Study:
             title=content.title,
             text=content.text,
             warnings=content.warnings,
+            tolerances=content.tolerances,
             content=content,
         )
 
@@ -116,6 +120,32 @@ class Study:
         status = Status.MET if record.met else Status.NOT_MET
         message = _verdict(record) if self.objectives else "modes of the design as it stands"
         return self._result("modes", status, message, record, evaluation, began, seed, route="evaluation")
+
+    def tolerance(self, design: Mapping[str, float] | None = None, *, seed: int | None = None) -> Result:
+        """What the tolerances do to the design as it stands, or to given values of the variables.
+
+        The nominal design is judged; the yield does not count for the status.
+
+        Raises
+        ------
+        StudyError
+            If the study states no tolerances, or a variable has no value.
+        """
+        began = time.perf_counter()
+        if not self.tolerances:
+            raise StudyError(f"{self.name}: `tolerance` needs at least one [[tolerance]] table")
+        if not self.objectives:
+            raise StudyError(f"{self.name}: `tolerance` needs at least one [[objective]] to judge builds by")
+        evaluator = Evaluator(self.model, self.objectives)
+        evaluation = evaluated(evaluator, self._standing(design))
+        self._refuse_unstable(evaluation)
+        record = describe(evaluation)
+        status = Status.MET if record.met else Status.NOT_MET
+        shop = tolerance_record(evaluator, evaluation.x[0], self.tolerances, seed=self._seed(seed))
+        message = f"nominal design: {_verdict(record)}; {_yield_words(shop)}"
+        return self._result(
+            "tolerance", status, message, record, evaluation, began, seed, route="evaluation", tolerance=shop
+        )
 
     def size(self, *, seed: int | None = None, progress: Progress = lambda _: None) -> Result:
         """Find parts whose assembly does what the objectives ask.
@@ -146,6 +176,10 @@ class Study:
         return self._sized(problem, outcome, began, seed, progress)
 
     def _sized(self, problem: Problem, outcome: Outcome, began: float, seed: int | None, progress: Progress) -> Result:
+        shop: dict[str, Any] | None = None
+        if self.tolerances and len(outcome.designs):
+            progress("drawing builds within the tolerances")
+            outcome, shop = self._by_yield(problem, outcome, self._seed(seed))
         evaluation = evaluated(problem.evaluator, problem.designs(outcome.closest)[0])
         if not len(problem.free):
             self._refuse_unstable(evaluation)
@@ -160,10 +194,14 @@ class Study:
         confirmed = verification is not None and verification.agrees
         status = Status.MET if record.met and confirmed else Status.NOT_MET
         others = [describe(evaluated(problem.evaluator, problem.designs(t)[0])) for t in outcome.designs[1:]]
+        words = _message(record, shortfall, verification, outcome)
+        if shop is not None:
+            ranked = ", the best of the designs found" if len(outcome.designs) > 1 else ""
+            words = f"{words}; {_yield_words(shop)}{ranked}"
         return self._result(
             "size",
             status,
-            _message(record, shortfall, verification, outcome),
+            words,
             record,
             evaluation,
             began,
@@ -172,7 +210,23 @@ class Study:
             alternatives=tuple(others),
             shortfall=shortfall,
             verification=verification,
+            tolerance=shop,
         )
+
+    def _by_yield(self, problem: Problem, outcome: Outcome, seed: int) -> tuple[Outcome, dict[str, Any]]:
+        """Designs in the order of the share of builds that pass, and what the shop does to the first."""
+        x = problem.designs(outcome.designs)
+        evaluator = problem.evaluator
+        shares = [
+            measure_yield(
+                evaluator, one, errors_of(self.tolerances, self.model, evaluator.nominal(one[None])[0]), seed=seed
+            ).share
+            for one in (x if len(x) > 1 and not problem.wishes else x[:1])
+        ]
+        order = np.argsort(-np.array(shares), kind="stable")
+        designs = np.concatenate([outcome.designs[order], outcome.designs[len(order) :]])
+        shop = tolerance_record(evaluator, problem.designs(designs[:1])[0], self.tolerances, seed=seed)
+        return Outcome(designs, designs[0], outcome.stopped), shop
 
     def _seed(self, seed: int | None) -> int:
         return self.solve.seed if seed is None else seed
@@ -239,6 +293,11 @@ class Study:
             },
             **rest,
         )
+
+
+def _yield_words(shop: Mapping[str, Any]) -> str:
+    share, low, high = (100 * shop[key] for key in ("yield", "yield_low", "yield_high"))
+    return f"{share:.2f} % of builds pass ({low:.2f} to {high:.2f} %, {shop['builds']} builds)"
 
 
 def _verdict(record: Design) -> str:

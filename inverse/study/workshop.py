@@ -1,18 +1,23 @@
-"""From the tolerances a study states to the unit errors of its base dimensions."""
+"""From the tolerances a study states to unit errors of its base dimensions, and what they do to a design."""
 
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
+from inverse.assembly.algebra import Monomial
 from inverse.assembly.assembly import Model
 from inverse.assembly.terms import Array
 from inverse.errors import StudyError
+from inverse.evaluation.evaluator import Evaluator
 from inverse.study.content import Tolerance as Stated
 from inverse.tolerance.classes import class_limit
 from inverse.tolerance.distributions import Errors, Limit, Tolerance
+from inverse.tolerance.worst_case import extremes
+from inverse.tolerance.yields import measure_yield
 from inverse.units import Window
 
 
@@ -70,13 +75,12 @@ def _limit(window: Window | None) -> Limit:
 
 def _shown(model: Model, base: Array) -> Array:
     """Dimensions as they are read: products multiplied out."""
-    known = dict(zip((d.name for d in model.parameters.dimensions), base, strict=True))
-    return np.array(
-        [
-            d.shown.coefficient * np.prod([known[name] ** power for name, power in d.shown.powers])
-            for d in model.parameters.dimensions
-        ]
-    )
+    return np.array([_value(dimension.shown, base, model) for dimension in model.parameters.dimensions])
+
+
+def _value(term: Monomial, base: Array, model: Model) -> float:
+    places = {dimension.name: i for i, dimension in enumerate(model.parameters.dimensions)}
+    return float(term.coefficient * np.prod([base[places[name]] ** power for name, power in term.powers]))
 
 
 def _refuse_too_wide(errors: Errors, model: Model, base: Array, names: list[str]) -> None:
@@ -87,3 +91,75 @@ def _refuse_too_wide(errors: Errors, model: Model, base: Array, names: list[str]
                 f"the tolerance on `{names[place]}` allows ± {limits[place]:.4g} on {base[place]:.4g}: a "
                 "dimension must stay positive in every build; tighten the tolerance"
             )
+
+
+def tolerance_record(evaluator: Evaluator, x: Array, stated: Sequence[Stated], *, seed: int) -> dict[str, Any]:
+    """What the shop does to one design: the part of a result under ``tolerance``.
+
+    Parameters
+    ----------
+    evaluator : Evaluator
+    x : ndarray, shape (P,)
+        Variables of the design.
+    stated : sequence of Tolerance
+        As the study states them.
+    seed : int
+        Of the builds drawn and of the corners searched.
+    """
+    base = evaluator.nominal(x[None])[0]
+    errors = errors_of(stated, evaluator.model, base)
+    passed = measure_yield(evaluator, x, errors, seed=seed)
+    return {
+        "yield": passed.share,
+        "yield_low": passed.low,
+        "yield_high": passed.high,
+        "confidence": passed.confidence,
+        "builds": passed.builds,
+        "worst_case": _worst_case(evaluator, x, errors, base, seed),
+        "contributions": [],
+        "sensitivities": _sensitivities(evaluator, x, errors, base),
+    }
+
+
+def _worst_case(evaluator: Evaluator, x: Array, errors: Errors, base: Array, seed: int) -> list[dict[str, Any]]:
+    """The extremes found, with the builds they were found at; nothing is claimed beyond that."""
+    touched = sorted(set(errors.dimension.tolist()))
+    dimensions = evaluator.model.parameters.dimensions
+    slopes = errors.slopes(base)
+
+    def build(u: Array) -> dict[str, float]:
+        d = base + slopes @ u
+        return {dimensions[i].name: float(_value(dimensions[i].shown, d, evaluator.model)) for i in touched}
+
+    return [
+        {
+            "label": objective.label,
+            "unit": objective.unit,
+            "low": found.low,
+            "high": found.high,
+            "low_at": build(found.low_at),
+            "high_at": build(found.high_at),
+            "exact": False,
+            "certain_low": None,
+            "certain_high": None,
+        }
+        for objective, found in zip(evaluator.objectives, extremes(evaluator, x, errors, seed=seed), strict=True)
+    ]
+
+
+def _sensitivities(evaluator: Evaluator, x: Array, errors: Errors, base: Array) -> list[dict[str, Any]]:
+    """First-order effect of every toleranced dimension on every objective, per unit of the dimension."""
+    model = evaluator.model
+    jacobian = evaluator.at(x).dimension_jacobian()[0]
+    shown = _shown(model, base)
+    rows = []
+    for objective, slopes in zip(evaluator.objectives, jacobian, strict=True):
+        for i in sorted(set(errors.dimension.tolist())):
+            dimension = model.parameters.dimensions[i]
+            # A product has nominal value one in its own place: per unit of what it comes to.
+            value = float(slopes[i] * base[i] / shown[i]) if shown[i] else float(slopes[i])
+            unit = f"{objective.unit} per {dimension.unit}"
+            rows.append(
+                {"label": objective.label, "dimension": dimension.name, "value": value, "second": None, "unit": unit}
+            )
+    return rows

@@ -123,6 +123,21 @@ def test_internal_faults_are_three_and_keep_their_traceback_for_debug(run, monke
     assert isinstance(run("size", STUDIES / "lantern_pair.toml", "--debug").exception, RuntimeError)
 
 
+def test_tolerance_judges_the_nominal_design_and_draws_builds(run, tmp_path):
+    run("size", STUDIES / "lantern_pair.toml", "--out", "first", "--quiet")
+    done = run("tolerance", STUDIES / "lantern_pair.toml", "--design", "first", "--out", "second")
+    assert done.exit_code == 0
+    shop = load_result("second").tolerance
+    assert set(shop) == {
+        "yield", "yield_low", "yield_high", "confidence", "builds", "worst_case", "contributions", "sensitivities"
+    }  # fmt: skip
+    assert shop["builds"] >= 10**5
+    assert 0.99 < shop["yield_low"] < shop["yield"] < shop["yield_high"] <= 1
+    beat = shop["worst_case"][1]
+    assert beat["high"] > 42.0, "the worst build misses the window while nearly every build passes"
+    assert run("tolerance", STUDIES / "cart.toml").exit_code == 2
+
+
 def test_schema_is_json(run):
     assert json.loads(run("schema").output)["type"] == "object"
 
