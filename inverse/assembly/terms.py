@@ -152,7 +152,7 @@ class Monomials:
         `a` are the `values` at `point`; `cotangent` has shape (B, k, N), the result (B, k, D).
         """
         builds, k, n = cotangent.shape
-        out = ((cotangent * a[:, None, :]).reshape(-1, n) @ self.exponents).reshape(builds, k, -1)
+        out = ((cotangent * a[:, None, :]).reshape(-1, n) @ self.exponents).reshape(builds, k, self.exponents.shape[1])
         for column, slope in enumerate(self._signed_slopes(point) if len(self.mixed) else ()):
             add_at(out, self.signed_dimension[:, column], cotangent[:, :, self.mixed] * slope[:, None])
         return np.asarray(out)

@@ -134,8 +134,6 @@ class Study:
         began = time.perf_counter()
         if not self.tolerances:
             raise StudyError(f"{self.name}: `tolerance` needs at least one [[tolerance]] table")
-        if not self.objectives:
-            raise StudyError(f"{self.name}: `tolerance` needs at least one [[objective]] to judge builds by")
         evaluator = Evaluator(self.model, self.objectives)
         evaluation = evaluated(evaluator, self._standing(design))
         self._refuse_unstable(evaluation)
@@ -153,17 +151,16 @@ class Study:
         Raises
         ------
         StudyError
-            If the study has nothing to judge a design by, or no design in the ranges can rest.
+            If the study asks for a route that is not there, or its only design does not rest.
         """
         began = time.perf_counter()
         problem = Problem(Evaluator(self.model, self.objectives))
         if not len(problem.free):
             outcome = Outcome(np.empty((0, 0)), np.empty(0), "there is nothing to choose")
         elif not self.objectives:
-            raise StudyError(
-                f"{self.name}: `size` needs at least one [[objective]] to choose the variables by; "
-                "use `modes` to see the design as it stands"
-            )
+            middle = (problem.lower + problem.upper) / 2
+            standing = middle if problem.start is None else problem.start
+            outcome = Outcome(standing[None], standing, "there is no objective to choose by")
         else:
             self._refuse_route()
             outcome = solve_by_gradient(

@@ -148,3 +148,32 @@ def test_version_is_that_of_the_package():
     from inverse.study.study import VERSION
 
     assert version("modewright") == VERSION
+
+
+NOTHING_ASKED = """
+[variables.k]
+range = ["1 N/m", "4 N/m"]
+[[body]]
+name = "a"
+kind = "mass"
+mass = "1 kg"
+[[link]]
+name = "s"
+kind = "spring"
+between = ["a", "ground"]
+rate = "k"
+[[tolerance]]
+on = ["s.rate"]
+each = "5 %"
+"""
+
+
+@pytest.mark.parametrize("command", ["size", "modes", "tolerance"])
+def test_without_objectives_the_status_is_met(run, tmp_path, command):
+    text = (
+        NOTHING_ASKED if command == "size" else NOTHING_ASKED.replace('range = ["1 N/m", "4 N/m"]', 'value = "2 N/m"')
+    )
+    (tmp_path / "bare.toml").write_text(text, encoding="utf-8")
+    done = run(command, "bare.toml")
+    assert done.exit_code == 0, done.output
+    assert load_result("out/bare").status == "met"
