@@ -24,6 +24,8 @@ def summary(result: Result) -> str:
         blocks.append(variables_table(result))
     if result.tolerance is not None:
         blocks.append(worst_table(result.tolerance["worst_case"]))
+        if recentred := result.tolerance.get("recentred"):
+            blocks.append(recentred_table(result, recentred))
     if result.command == "modes" or not result.objectives:
         blocks.append(modes_table(result.design))
     return "\n\n".join(blocks)
@@ -89,6 +91,16 @@ def worst_table(rows: Sequence[Mapping[str, Any]]) -> str:
     """The farthest builds found within the tolerances."""
     table = [("worst builds found", "lowest", "highest")]
     table += [(row["label"], shown(row["low"], row["unit"]), shown(row["high"], row["unit"])) for row in rows]
+    return aligned(table)
+
+
+def recentred_table(result: Result, recentred: Mapping[str, Any]) -> str:
+    """Variables that a re-centred nominal design moves."""
+    units = result.design.variable_units
+    table = [("re-centred", "from", "to")]
+    for name, value in recentred["variables"].items():
+        if value != result.variables[name]:
+            table.append((name, shown(result.variables[name], units[name]), shown(value, units[name])))
     return aligned(table)
 
 

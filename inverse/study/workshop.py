@@ -11,11 +11,13 @@ import numpy as np
 from inverse.assembly.algebra import Monomial
 from inverse.assembly.assembly import Model
 from inverse.assembly.terms import Array
+from inverse.design.problem import Problem
 from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluator
 from inverse.study.content import Tolerance as Stated
 from inverse.tolerance.classes import class_limit
 from inverse.tolerance.distributions import Errors, Limit, Tolerance
+from inverse.tolerance.recentring import recentre
 from inverse.tolerance.worst_case import extremes
 from inverse.tolerance.yields import measure_yield
 from inverse.units import Window
@@ -118,6 +120,20 @@ def tolerance_record(evaluator: Evaluator, x: Array, stated: Sequence[Stated], *
         "worst_case": _worst_case(evaluator, x, errors, base, seed),
         "contributions": [],
         "sensitivities": _sensitivities(evaluator, x, errors, base),
+    }
+
+
+def recentring_record(problem: Problem, x: Array, stated: Sequence[Stated], *, seed: int) -> dict[str, Any] | None:
+    """A nominal design that more builds of pass, on builds drawn afresh; None where none was found."""
+    model = problem.evaluator.model
+    found = recentre(problem, x, lambda base: errors_of(stated, model, base), seed=seed + 1)
+    if not found.moved:
+        return None
+    return {
+        "variables": {v.name: float(value) for v, value in zip(problem.variables, found.x, strict=True)},
+        "yield_before": found.before.share,
+        "yield_after": found.after.share,
+        "seed": found.after.seed,
     }
 
 
