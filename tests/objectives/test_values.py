@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+import scipy.linalg as sl
 from assemblies import built, chain, pair
 from numpy.testing import assert_allclose
 
@@ -241,3 +242,24 @@ def test_batches_give_what_single_builds_give():
     assert_allclose(together.values(), single, rtol=1e-12)
     assert np.isfinite(at_rest(model, d).values).all()
     assert Matrices(model, at_rest(model, d)).point.builds == 5
+
+
+@pytest.mark.parametrize("coupling", [0.0, 0.3])
+def test_labels_of_a_matrix_have_their_share_of_the_energy(coupling):
+    """Shares of all labels sum to one; with a diagonal mass they are m u² of each (common practice, no source)."""
+    from inverse.assembly.matrix_model import MatrixModel
+
+    M = np.array([[2.0, coupling], [coupling, 3.0]])
+    K = np.array([[50.0, -10.0], [-10.0, 70.0]])
+    model = MatrixModel(name="pair", labels=("u", "v"), mass=M, stiffness=K)
+    shares = measure(
+        Assembly(matrices=(model,)),
+        EnergyShare(requirement=T, label="", mode=1, owner="u"),
+        EnergyShare(requirement=T, label="", mode=1, owner="v"),
+        TransferCompleteness(requirement=T, label="", source="u.x", target="v"),
+    )
+    assert_allclose(shares[0] + shares[1], 1.0, rtol=1e-12)
+    assert 0 < shares[2] <= 1
+    if not coupling:
+        _, shapes = sl.eigh(K, M)
+        assert_allclose(shares[0], 2.0 * shapes[0, 0] ** 2, rtol=1e-12)
