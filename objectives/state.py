@@ -53,7 +53,7 @@ class Energy:
 
 @dataclass(frozen=True, slots=True)
 class MassBlock:
-    """Rows and columns of ``M`` that belong to some components, shape (B, s, s)."""
+    """Mass terms owned by the bodies of some components, over these components, shape (B, s, s)."""
 
     components: tuple[str, ...]
 

@@ -110,7 +110,11 @@ class BuildState:
         return self._known[quantity]
 
     def _value(self, quantity: Quantity) -> Array:
-        modes, matrices = self.modes, self.matrices
+        matrices = self.matrices
+        if isinstance(quantity, MassBlock):
+            parts = self._owned_parts(quantity.components)
+            return np.asarray(np.sum([self._owned_block(*part) for part in parts], axis=0))
+        modes = self.modes
         match quantity:
             case Eigenvalues():
                 return modes.eigenvalues
@@ -120,10 +124,6 @@ class BuildState:
                 chosen = matrices.owned(owner)
                 E = matrices.mass.strains(modes.shapes)[:, chosen]
                 return np.asarray(np.einsum("bt,btj->bj", matrices.mass.weights[:, chosen], E**2))
-            case MassBlock(components):
-                selection = self._selection(components)
-                E = matrices.mass.rows @ selection
-                return np.swapaxes(E * matrices.mass.weights[:, :, None], 1, 2) @ E
             case StiffnessForm():
                 return modes.eigenvalues[:, :, None] * np.eye(modes.eigenvalues.shape[1])
             case MassForm():
@@ -150,6 +150,27 @@ class BuildState:
         """Unit motions of the components in the coordinates, shape (B, n, s)."""
         rows = self._rows(components)
         return np.swapaxes(np.divide(1.0, rows, out=np.zeros_like(rows), where=rows != 0), 1, 2)
+
+    def _owned_parts(self, components: tuple[str, ...]) -> list[tuple[IntArray, Array]]:
+        """Per body of some components, its mass squares and the unit motions they see, (B, n, s).
+
+        Geared rotors share a coordinate: each one's own squares see the coordinate as its own rotation alone.
+        """
+        places = self.matrices.model.components
+        motions, parts = self._selection(components), []
+        for body in dict.fromkeys(component.rpartition(".")[0] for component in components):
+            own = [i for i, component in enumerate(components) if component.rpartition(".")[0] == body]
+            taken = {coordinate for i in own for coordinate, _ in places[components[i]]}
+            seen = motions.copy()
+            for i, component in enumerate(components):
+                if i not in own and taken & {coordinate for coordinate, _ in places[component]}:
+                    seen[:, :, i] = 0.0
+            parts.append((self.matrices.owned(body), seen))
+        return parts
+
+    def _owned_block(self, chosen: IntArray, motions: Array) -> Array:
+        E = self.matrices.mass.rows[:, chosen] @ motions
+        return np.asarray(np.swapaxes(E * self.matrices.mass.weights[:, chosen, None], 1, 2) @ E)
 
     def _released(self, component: str) -> Array:
         q0 = self._selection((component,))
@@ -184,22 +205,13 @@ class BuildState:
         for like in self.likes:
             a = np.array([value for _, value in like.pattern])
             rows = self._rows(like.components)[b] @ cluster
-            W = (
-                self[MassBlock(like.components)][b]
-                if MassBlock(like.components) in self._known
-                else self._block(b, like)
-            )
+            W = self[MassBlock(like.components)][b]
             wanted.append(rows.T @ W @ a)
         size = [float(np.linalg.norm(w)) for w in wanted]
         order = np.argsort(size)[::-1]
         frame = np.array([wanted[i] for i in order if size[i] > 1e-12] or np.eye(cluster.shape[1]))
         q, r = np.linalg.qr(np.hstack([frame.T, np.eye(cluster.shape[1])]))
         return np.asarray(cluster @ (q[:, : cluster.shape[1]] * np.where(np.diag(r) < 0, -1.0, 1.0)))
-
-    def _block(self, b: int, like: Like) -> Array:
-        selection = self._selection(like.components)[b]
-        E = self.matrices.mass.rows[b] @ selection
-        return np.asarray(E.T @ (self.matrices.mass.weights[b][:, None] * E))
 
 
 def deflection(quantity: Sag) -> Deflection:
@@ -250,8 +262,9 @@ class Slopes:
             case Energy(owner):
                 self._through_shapes(at, pull_owned(matrices, modes, matrices.owned(owner), cotangent, out))
             case MassBlock(components):
-                pull_form(matrices.mass, state._selection(components), cotangent, out)
-                self._through_block(components, cotangent, out)
+                for chosen, motions in state._owned_parts(components):
+                    pull_form(matrices.mass, motions, cotangent, out, chosen)
+                    self._through_block(components, state._owned_block(chosen, motions), cotangent, out)
             case StiffnessForm():
                 pull_form(matrices.stiffness, modes.shapes, cotangent, out)
             case MassForm():
@@ -283,9 +296,8 @@ class Slopes:
         for coordinate, monomial in self.state.matrices.model.components[component]:
             out[:, :, monomial] += np.einsum("bkj,bj->bk", cotangent, self.state.modes.shapes[:, coordinate])
 
-    def _through_block(self, components: tuple[str, ...], cotangent: Array, out: Array) -> None:
+    def _through_block(self, components: tuple[str, ...], block: Array, cotangent: Array, out: Array) -> None:
         """A geared component scales its row and column of the block by 1/ratio each."""
-        block = self.state[MassBlock(components)]
         for i, component in enumerate(components):
             for _, monomial in self.state.matrices.model.components[component]:
                 both = cotangent[:, :, i] + cotangent[:, :, :, i]

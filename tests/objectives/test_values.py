@@ -263,3 +263,29 @@ def test_labels_of_a_matrix_have_their_share_of_the_energy(coupling):
     if not coupling:
         _, shapes = sl.eigh(K, M)
         assert_allclose(shares[0], 2.0 * shapes[0, 0] ** 2, rtol=1e-12)
+
+
+def test_geared_rotors_weigh_with_their_own_inertia():
+    """Mass-weighted assurance of rotors a, c and e, two of them geared to one shaft, against plain arithmetic."""
+    from inverse.assembly.bodies import Rotor
+    from inverse.assembly.links import Gear, Shaft
+
+    inertia = {"a": 0.6, "b": 0.03, "c": 0.3, "d": 1.9, "e": 0.1}
+    train = Assembly(
+        bodies=tuple(Rotor(name=name, inertia=J) for name, J in inertia.items()),
+        links=(
+            Shaft(name="s1", between=("a", "b"), rate=28e3),
+            Gear(name="g1", between=("b", "c"), ratio=-0.4),
+            Shaft(name="s2", between=("c", "d"), rate=5729.6),
+            Gear(name="g2", between=("e", "c"), ratio=2.5),
+        ),
+    )
+    like = Like((("a.r", 1.0), ("e.r", -1.0), ("c.r", 0.0)))
+    (value,) = measure(train, Shape(requirement=T, label="", mode=2, like=like))
+
+    M = np.diag([0.6, 0.03 + 0.4**2 * 0.3 + 0.16**2 * 0.1, 1.9])
+    twist = np.array([[1.0, -1.0, 0.0], [0.0, -0.4, -1.0]])
+    _, shapes = sl.eigh(twist.T @ np.diag([28e3, 5729.6]) @ twist, M)
+    u = np.array([shapes[0, 2], -0.16 * shapes[1, 2], -0.4 * shapes[1, 2]])
+    W, a = np.diag([0.6, 0.1, 0.3]), np.array([1.0, -1.0, 0.0])
+    assert_allclose(value, (a @ W @ u) ** 2 / ((a @ W @ a) * (u @ W @ u)), rtol=1e-9)
