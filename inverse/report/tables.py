@@ -13,6 +13,8 @@ BAR = 15
 
 MOST_MODES = 12
 
+MOST_SENTENCES = 12
+
 
 def summary(result: Result) -> str:
     """The first things a reader wants: the answer, what was asked, the parts to order, and why if not."""
@@ -24,6 +26,9 @@ def summary(result: Result) -> str:
         blocks.append(variables_table(result))
     if result.tolerance is not None:
         blocks.append(worst_table(result.tolerance["worst_case"]))
+        if told := [row["sentence"] for row in result.tolerance["sensitivities"]]:
+            blocks.append("\n".join(told[:MOST_SENTENCES]))
+        blocks += [f"note: {remark}" for remark in result.tolerance.get("remarks", ())]
         if recentred := result.tolerance.get("recentred"):
             blocks.append(recentred_table(result, recentred))
     if result.command == "modes" or not result.objectives:

@@ -27,7 +27,7 @@ from inverse.study.content import SolveSettings, StudyContent, Tolerance
 from inverse.study.describe import describe, evaluated
 from inverse.study.remarks import remarks
 from inverse.study.result import Design, Result, Status
-from inverse.study.workshop import errors_of, recentring_record, tolerance_record
+from inverse.study.workshop import contribution_records, errors_of, recentring_record, tolerance_record
 from inverse.tolerance.yields import measure_yield
 from objectives.base import Objective
 
@@ -141,6 +141,10 @@ class Study:
         status = Status.MET if record.met else Status.NOT_MET
         shop = tolerance_record(evaluator, evaluation.x[0], self.tolerances, seed=self._seed(seed))
         problem = Problem(evaluator)
+        if self.objectives:
+            shop["contributions"], shop["remarks"] = contribution_records(
+                evaluator, evaluation.x[0], self.tolerances, seed=self._seed(seed)
+            )
         if len(problem.free) and self.objectives:
             shop["recentred"] = recentring_record(problem, evaluation.x[0], self.tolerances, seed=self._seed(seed))
         message = f"nominal design: {_verdict(record)}; {_yield_words(shop)}"

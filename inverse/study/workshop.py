@@ -16,8 +16,10 @@ from inverse.errors import StudyError
 from inverse.evaluation.evaluator import Evaluator
 from inverse.study.content import Tolerance as Stated
 from inverse.tolerance.classes import class_limit
+from inverse.tolerance.contributions import contributions
 from inverse.tolerance.distributions import Errors, Limit, Tolerance
 from inverse.tolerance.recentring import recentre
+from inverse.tolerance.sensitivities import sensitivities, sentence
 from inverse.tolerance.worst_case import extremes
 from inverse.tolerance.yields import measure_yield
 from inverse.units import Window
@@ -119,7 +121,7 @@ def tolerance_record(evaluator: Evaluator, x: Array, stated: Sequence[Stated], *
         "builds": passed.builds,
         "worst_case": _worst_case(evaluator, x, errors, base, seed),
         "contributions": [],
-        "sensitivities": _sensitivities(evaluator, x, errors, base),
+        "sensitivities": _sensitivities(evaluator, x, errors),
     }
 
 
@@ -163,19 +165,35 @@ def _worst_case(evaluator: Evaluator, x: Array, errors: Errors, base: Array, see
     ]
 
 
-def _sensitivities(evaluator: Evaluator, x: Array, errors: Errors, base: Array) -> list[dict[str, Any]]:
-    """First-order effect of every toleranced dimension on every objective, per unit of the dimension."""
-    model = evaluator.model
-    jacobian = evaluator.at(x).dimension_jacobian()[0]
-    shown = _shown(model, base)
-    rows = []
-    for objective, slopes in zip(evaluator.objectives, jacobian, strict=True):
-        for i in sorted(set(errors.dimension.tolist())):
-            dimension = model.parameters.dimensions[i]
-            # A product has nominal value one in its own place: per unit of what it comes to.
-            value = float(slopes[i] * base[i] / shown[i]) if shown[i] else float(slopes[i])
-            unit = f"{objective.unit} per {dimension.unit}"
-            rows.append(
-                {"label": objective.label, "dimension": dimension.name, "value": value, "second": None, "unit": unit}
-            )
-    return rows
+def _sensitivities(evaluator: Evaluator, x: Array, errors: Errors) -> list[dict[str, Any]]:
+    """First and second order effect of every error on every objective, ranked, with a sentence for the shop."""
+    return [
+        {
+            "label": row.label,
+            "dimension": ", ".join(row.moves),
+            "value": row.first,
+            "second": row.second,
+            "unit": f"{row.unit} per {row.per}",
+            "sentence": sentence(row),
+        }
+        for row in sensitivities(evaluator, x, errors)
+    ]
+
+
+def contribution_records(
+    evaluator: Evaluator, x: Array, stated: Sequence[Stated], *, seed: int
+) -> tuple[list[dict[str, Any]], list[str]]:
+    """Variance shares of every objective, and remarks where the linear budget does not hold them."""
+    errors = errors_of(stated, evaluator.model, evaluator.nominal(x[None])[0])
+    found = contributions(evaluator, x, errors, seed=seed)
+    rows = [
+        {
+            "label": share.label,
+            "dimension": ", ".join(share.moves),
+            "first_order": share.first_order,
+            "total": share.total,
+            "linear": share.linear,
+        }
+        for share in found.shares
+    ]
+    return rows, [one.remark for one in found.scatter if one.remark]
