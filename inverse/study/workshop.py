@@ -8,7 +8,6 @@ from typing import Any
 
 import numpy as np
 
-from inverse.assembly.algebra import Monomial
 from inverse.assembly.assembly import Model
 from inverse.assembly.terms import Array
 from inverse.design.problem import Problem
@@ -19,7 +18,7 @@ from inverse.tolerance.classes import class_limit
 from inverse.tolerance.contributions import contributions
 from inverse.tolerance.distributions import Errors, Limit, Tolerance
 from inverse.tolerance.recentring import recentre
-from inverse.tolerance.sensitivities import sensitivities, sentence
+from inverse.tolerance.sensitivities import sensitivities, sentence, shown_values
 from inverse.tolerance.worst_case import extremes
 from inverse.tolerance.yields import measure_yield
 from inverse.units import Window
@@ -45,7 +44,7 @@ def errors_of(stated: Sequence[Stated], model: Model, base: Array) -> Errors:
         If a limit is not smaller than the size of its dimension.
     """
     names = [dimension.name for dimension in model.parameters.dimensions]
-    shown = _shown(model, base)
+    shown = shown_values(model, base)
     errors = Errors.of([table for one in stated for table in _tables(one, names, base, shown)], len(names))
     product = shown[errors.dimension] != base[errors.dimension]
     absolute = product & ~errors.relative
@@ -75,16 +74,6 @@ def _pieces(name: str, names: list[str], base: Array) -> int:
 
 def _limit(window: Window | None) -> Limit:
     return Limit() if window is None else Limit(window.value, window.relative)
-
-
-def _shown(model: Model, base: Array) -> Array:
-    """Dimensions as they are read: products multiplied out."""
-    return np.array([_value(dimension.shown, base, model) for dimension in model.parameters.dimensions])
-
-
-def _value(term: Monomial, base: Array, model: Model) -> float:
-    places = {dimension.name: i for i, dimension in enumerate(model.parameters.dimensions)}
-    return float(term.coefficient * np.prod([base[places[name]] ** power for name, power in term.powers]))
 
 
 def _refuse_too_wide(errors: Errors, model: Model, base: Array, names: list[str]) -> None:
@@ -146,8 +135,8 @@ def _worst_case(evaluator: Evaluator, x: Array, errors: Errors, base: Array, see
     slopes = errors.slopes(base)
 
     def build(u: Array) -> dict[str, float]:
-        d = base + slopes @ u
-        return {dimensions[i].name: float(_value(dimensions[i].shown, d, evaluator.model)) for i in touched}
+        values = shown_values(evaluator.model, base + slopes @ u)
+        return {dimensions[i].name: float(values[i]) for i in touched}
 
     return [
         {

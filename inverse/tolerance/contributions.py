@@ -239,7 +239,10 @@ class Scatter:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Contributions:
-    """Per objective its scatter, and all shares: objectives in order, within each the greatest total first."""
+    """Per objective its scatter, and all shares: objectives in order, within each the greatest total first.
+
+    Empty where there are no errors.
+    """
 
     scatter: tuple[Scatter, ...]
     shares: tuple[Contribution, ...]
@@ -260,6 +263,8 @@ def contributions(evaluator: Evaluator, x: Array, errors: Errors, *, seed: int, 
     points : int
         See `sobol_indices`; errors that move the same dimensions count as one input.
     """
+    if not errors.units:
+        return Contributions(scatter=(), shares=(), builds=0, seed=seed)
     over = OverErrors(evaluator, x, errors)
     groups = _groups(errors)
     found = sobol_indices(

@@ -9,10 +9,9 @@ w        importance weight, the standard normal density over that of the samplin
 
 Failure points are local minima of ``|y|`` on ``g = 0``, found by the improved method of Hasofer, Lind, Rackwitz and
 Fiessler [1]_ from several starts at once. The first-order estimate is ``Σ Φ(−β)``. Sampling is from a mixture of
-standard normals
-shifted to the points, with the density of the whole mixture in every weight [2]_; scrambled Sobol' points whose
-first coordinate runs along ``y*`` spend their evenness where failure is decided. Failed builds that carry
-much weight far from all points start the search anew, so that a region no start has led to is seen.
+standard normals shifted to the points, with the density of the whole mixture in every weight [2]_; scrambled Sobol'
+points whose first coordinate runs along ``y*`` spend their evenness where failure is decided. Failed builds that
+carry more weight than any near the points should start the search anew, so that a region no start has led to is seen.
 
 References
 ----------
@@ -113,7 +112,7 @@ class FailurePoint:
     limit : int
         Which limit state fails there.
     beta : float
-        Distance from the origin; negative where the origin has failed itself.
+        Distance from the origin; negative where the origin has failed itself, −∞ where then nothing else was found.
     y : ndarray, shape (n,)
     probability : float
         ``Φ(−β)``.
@@ -171,7 +170,14 @@ def failure_probability(
         Standard error over the probability at which sampling stops.
     budget : int
         Builds after which it stops in any case.
+
+    Raises
+    ------
+    ValueError
+        If nothing varies: then the nominal design alone decides.
     """
+    if variables < 1:
+        raise ValueError("expected at least one variable, found none: without errors the nominal design decides")
     counted = _Counted(limits)
     rng = np.random.default_rng(seed)
     half = rng.standard_normal((STARTS // 2, variables))
@@ -182,11 +188,10 @@ def failure_probability(
         if not points:
             break
         sample = _Sample.of(counted, points, np.random.SeedSequence([seed, anew]))
-        surprises = sample.round()
-        known = len(points)
+        surprises, known = sample.round(), set(map(id, points))
         if len(surprises) and anew + 1 < SEARCHES:
             points = _merged([*points, *_search(counted, surprises)])
-        if len(points) == known:
+        if known.issuperset(map(id, points)):
             probability, error = sample.until(relative_error, budget)
             break
     return Failure(
@@ -226,9 +231,13 @@ def _search(limits: _Counted, starts: Array) -> list[FailurePoint]:
         own = _Descent(limits, one[some], starts[run[some]], g[start, one[some]], slopes[start, one[some]])
         own.run()
         found += [_point(int(own.one[i]), own.y[i], nominal, minimum=True) for i in np.flatnonzero(own.done)]
-        left = np.flatnonzero(~own.done & np.isfinite(own.failed).all(axis=1) & (nominal[own.one] > 0))
+        left = np.flatnonzero(~own.done & own.lost & (nominal[own.one] > 0))
         ends = _bisected(limits, own.failed[left], own.one[left])
         found += [_point(int(i), end, nominal, minimum=False) for i, end in zip(own.one[left], ends, strict=True)]
+    near = {point.limit for point in found}
+    origin = np.zeros(starts.shape[1])
+    for limit in set(np.flatnonzero(~(nominal > 0)).tolist()) - near:
+        found.append(FailurePoint(limit=limit, beta=-np.inf, y=origin, probability=1.0, minimum=True))
     return found
 
 
@@ -244,7 +253,7 @@ class _Descent:
         self.limits, self.one, self.y, self.g, self.a = limits, one, y, g, a
         self.B = np.tile(np.eye(y.shape[1]), (len(y), 1, 1))
         self.done = np.zeros(len(y), bool)
-        self.failed = np.full(y.shape, np.nan)
+        self.failed, self.lost = y.copy(), np.zeros(len(y), bool)
         self._note(np.arange(len(y)), y, g)
 
     def run(self) -> None:
@@ -298,6 +307,7 @@ class _Descent:
         """Keep points of failure, for searches that end nowhere."""
         lost = ~(g > 0)
         self.failed[at[lost]] = y[lost]
+        self.lost[at[lost]] = True
 
     def _accept(self, at: IntArray, mu: Array, y: Array, g: Array, a: Array) -> None:
         """Move, and learn the curvature of ``½|y|² − μ g`` (BFGS, damped so that ``B`` stays positive definite)."""
@@ -474,29 +484,30 @@ class ErrorLimits:
 
     def values(self, y: Array) -> Array:
         """``g``, shape (B, m)."""
-        return self._limits(self.over.values(self._errors(y)[0]))
+        return self._limits(self.over.values(self.errors_at(y)[0]))
 
     def slopes(self, y: Array) -> tuple[Array, Array]:
         """``g``, shape (B, m), and ``∂g/∂y``, shape (B, m, U)."""
-        u, by_y = self._errors(y)
+        u, by_y = self.errors_at(y)
         values, slopes = self.over.slopes(u)
         place, sign, _, scale = self._columns
         return self._limits(values), slopes[:, place] * (sign / scale)[:, None] * by_y[:, None, :]
 
     @property
     def _columns(self) -> tuple[IntArray, Array, Array, Array]:
-        place, *others = np.array(self.sides, float).reshape(-1, 4).T
-        sign, limit, scale = others
-        return place.astype(np.intp), sign, limit, scale
+        place, sign, edge, scale = np.array(self.sides, float).reshape(-1, 4).T
+        return place.astype(np.intp), sign, edge, scale
 
     def _limits(self, values: Array) -> Array:
         place, sign, edge, scale = self._columns
         return np.asarray(sign * (values[:, place] - edge) / scale)
 
-    def _errors(self, y: Array) -> tuple[Array, Array]:
+    def errors_at(self, y: Array) -> tuple[Array, Array]:
+        """Unit errors ``u`` and ``du/dy``, both (B, U)."""
         distributions = self.over.errors.distribution
         pairs = [standard_to_unit(name, column) for name, column in zip(distributions, y.T, strict=True)]
-        return np.array([u for u, _ in pairs]).T, np.array([slope for _, slope in pairs]).T
+        u, slope = np.array(pairs, float).reshape(-1, 2, len(y)).transpose(1, 2, 0)
+        return u, slope
 
 
 def _sides(requirement: Requirement) -> list[tuple[float, float, float]]:
@@ -555,13 +566,20 @@ def rare_failures(
     errors : Errors
     seed, relative_error, budget
         See `failure_probability`.
+
+    Raises
+    ------
+    ValueError
+        If there are no errors, or no objective has an edge.
     """
     limits = ErrorLimits(OverErrors(evaluator, x, errors))
+    if not limits.sides:
+        raise ValueError("expected an objective with a target or a limit, found none: nothing can be missed")
     found = failure_probability(limits, errors.units, seed=seed, relative_error=relative_error, budget=budget)
     builds = []
     for point in found.points:
         place, sign, _, _ = limits.sides[point.limit]
-        u, _ = limits._errors(point.y[None])
+        u, _ = limits.errors_at(point.y[None])
         builds.append(
             FailingBuild(
                 label=evaluator.objectives[place].label,

@@ -16,14 +16,12 @@ import numpy as np
 from inverse.assembly.terms import Array
 from inverse.evaluation.evaluator import Evaluator
 from inverse.tolerance.distributions import Errors
+from inverse.tolerance.sensitivities import OverErrors
 
 STARTS = 32
 """Random corners beside the nominal design."""
 
 STEPS = 12
-
-TURNED = 512
-"""Builds evaluated at a time."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -53,23 +51,10 @@ def extremes(evaluator: Evaluator, x: Array, errors: Errors, *, seed: int) -> tu
 
 
 class _Search:
-    """Values and slopes over unit errors."""
+    """Corners of unit errors, looked at side by side."""
 
     def __init__(self, evaluator: Evaluator, x: Array, errors: Errors, rng: np.random.Generator) -> None:
-        self.evaluator, self.x, self.rng = evaluator, x, rng
-        self.nominal = evaluator.nominal(x[None])[0]
-        self.T = errors.slopes(self.nominal).toarray()
-
-    def at(self, u: Array) -> tuple[Array, Array]:
-        """Values (B, m) and slopes (B, m, U)."""
-        parts = [self._at(u[k : k + TURNED]) for k in range(0, len(u), TURNED)]
-        values, slopes = zip(*parts, strict=True)
-        return np.concatenate(values), np.concatenate(slopes)
-
-    def _at(self, u: Array) -> tuple[Array, Array]:
-        base = self.nominal + u @ self.T.T
-        evaluation = self.evaluator.of_dimensions(base, np.tile(self.x, (len(u), 1)))
-        return evaluation.values(), evaluation.dimension_jacobian() @ self.T
+        self.over, self.units, self.rng = OverErrors(evaluator, x, errors), errors.units, rng
 
     def extreme(self, i: int) -> Extreme:
         """Both ends of one objective."""
@@ -78,13 +63,12 @@ class _Search:
         return Extreme(low=low, high=high, low_at=low_at, high_at=high_at)
 
     def _end(self, i: int, sign: float) -> tuple[float | None, Array]:
-        U = self.T.shape[1]
-        corners = np.where(self.rng.random((STARTS, U)) < 0.5, -1.0, 1.0)
-        u = np.vstack([np.zeros((1, U)), corners])
+        corners = np.where(self.rng.random((STARTS, self.units)) < 0.5, -1.0, 1.0)
+        u = np.vstack([np.zeros((1, self.units)), corners])
         best = np.full(len(u), -np.inf)
         kept = u.copy()
         for _ in range(STEPS):
-            values, slopes = self.at(u)
+            values, slopes = self.over.slopes(u)
             if np.isnan(values[:, i]).any():
                 return None, u[int(np.argmax(np.isnan(values[:, i])))]
             value = sign * values[:, i]
@@ -101,7 +85,7 @@ class _Search:
         for _ in range(STEPS):
             others = np.repeat(u[None], len(u), axis=0)
             np.fill_diagonal(others, np.where(u == 0, 1.0, -u))
-            values = sign * self.at(others)[0][:, i] if len(u) else np.empty(0)
+            values = sign * self.over.values(others)[:, i]
             if np.isnan(values).any():
                 return None, others[int(np.argmax(np.isnan(values)))]
             if not len(values) or values.max() <= best:

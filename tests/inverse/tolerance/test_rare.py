@@ -16,6 +16,7 @@ from inverse.tolerance.yields import measure_yield
 from objectives.base import AtLeast, AtMost, Minimise, Target
 from objectives.frequency import BeatPeriod, Frequency
 from objectives.parts import TotalMass
+from objectives.transfer import TransferCompleteness
 
 NONE = np.zeros(0)
 
@@ -255,3 +256,30 @@ def test_truncated_errors_are_mapped_as_the_yield_draws_them():
     points = next(Cube(errors.units, 3).chunks(64, 64))
     u = np.array([standard_to_unit("normal", stats.norm.ppf(column))[0] for column in points.T])
     np.testing.assert_allclose(u, unit_errors(errors, points), atol=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("requirement", "limit", "words"), [(AtMost(0.2), 0.0, "one variable"), (Minimise(), 0.01, "limit")]
+)
+def test_what_cannot_fail_at_random_is_refused(requirement, limit, words):
+    found = evaluator(pair(), Frequency(requirement=requirement, label="f", mode=1))
+    with pytest.raises(ValueError, match=words):
+        rare_failures(found, NONE, errors_on(found, ".length", each=Limit(limit)), seed=1)
+
+
+def test_a_design_that_fails_whatever_the_errors():
+    found = evaluator(pair(), Frequency(requirement=AtMost(0.2), label="f", mode=1))
+    rare = rare_failures(found, NONE, errors_on(found, ".length", each=Limit(0.01)), seed=1)
+    assert rare.failure.probability == pytest.approx(1.0)
+
+
+def test_a_judged_number_that_jumps():
+    """Transfer completeness of a detuned pair: no gradient leads across, and both mirror images fail."""
+    whole = TransferCompleteness(requirement=AtLeast(0.97), label="whole", source="east.x", target="west")
+    found = evaluator(pair(), whole)
+    errors = errors_on(found, ".length", each=Limit(0.05))
+    rare = rare_failures(found, NONE, errors, seed=1, relative_error=0.03).failure
+    plain = measure_yield(found, NONE, errors, seed=2, builds=2**15)
+    share = 1 - plain.share
+    assert share > 1e-3
+    assert abs(rare.probability - share) < 4 * np.sqrt(share / plain.builds + (rare.relative_error * share) ** 2)
