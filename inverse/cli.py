@@ -7,7 +7,10 @@ fault, 3 an internal fault.
 from __future__ import annotations
 
 import functools
+import io
+import os
 import sys
+import threading
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -15,6 +18,8 @@ from typing import TYPE_CHECKING, Any
 import click
 
 if TYPE_CHECKING:
+    from rich.status import Status
+
     from inverse.study.result import Result
 
 MET, NOT_MET, AT_FAULT, INTERNAL, INTERRUPTED = 0, 1, 2, 3, 130
@@ -24,6 +29,9 @@ MET, NOT_MET, AT_FAULT, INTERNAL, INTERRUPTED = 0, 1, 2, 3, 130
 @click.version_option(package_name="modewright", prog_name="modewright")
 def main() -> None:
     """Turn wanted behaviour of coupled oscillators into the parts to order."""
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        # A bar or a name that the encoding of a pipe lacks must not cost the run.
+        sys.stdout.reconfigure(errors="replace")
 
 
 def guarded(command: Callable[..., int]) -> Callable[..., None]:
@@ -125,18 +133,13 @@ def tolerance(study: Path, design: Path | None, out: Path | None, seed: int | No
 
 @main.command()
 @click.argument("folder", type=click.Path(file_okay=False, path_type=Path))
-@click.option("--debug", is_flag=True, help="Show the traceback of a fault.")
+@common
 @guarded
-def report(folder: Path) -> int:
-    """Write report.html again from the files in FOLDER."""
-    from inverse.report.page import render_page
-    from inverse.study.archive import STUDY_TEXT, load_result, read_text, save_result
+def report(folder: Path, out: Path | None, seed: int | None, as_json: bool, quiet: bool) -> int:
+    """Write report.html again from the files in FOLDER; nothing is computed, so that --seed changes nothing."""
+    from inverse.study.archive import STUDY_TEXT, load_result, read_text
 
-    result = load_result(folder)
-    text = read_text(folder / STUDY_TEXT)
-    save_result(result, folder, {"report.html": render_page(result, text)})
-    click.echo(folder / "report.html")
-    return MET
+    return delivered(load_result(folder), read_text(folder / STUDY_TEXT), out or folder, as_json, quiet)
 
 
 @main.command()
@@ -148,7 +151,7 @@ def schema() -> int:
 
     from inverse.study.schema import json_schema
 
-    click.echo(json.dumps(json_schema(), indent=1, ensure_ascii=False))
+    say((json.dumps(json_schema(), indent=1, ensure_ascii=False) + "\n").encode())
     return MET
 
 
@@ -161,35 +164,60 @@ def delivered(result: Result, study_text: str, out: Path | None, as_json: bool, 
     folder = Path("out") / result.study if out is None else out
     save_result(result, folder, {STUDY_TEXT: study_text, "report.html": render_page(result, study_text)})
     if as_json:
-        click.echo(record_text(result), nl=False)
+        # JSON is UTF-8 whatever the locale.
+        say(record_text(result).encode())
     elif not quiet:
-        from inverse.report.tables import summary
+        from inverse.report.tables import print_summary, summary
 
-        click.echo(summary(result))
-        click.echo(f"\nwritten to {folder}: result.json, parts.csv, report.html")
+        if sys.stdout.isatty():
+            print_summary(result)
+        else:
+            say(summary(result) + "\n")
+        say(f"\nwritten to {folder}: result.json, parts.csv, report.html\n")
     return MET if result.status is Status.MET else NOT_MET
 
 
+def say(text: str | bytes) -> None:
+    """Print; a reader that has seen enough and closed the pipe is no fault."""
+    try:
+        click.echo(text, nl=False)
+    except BrokenPipeError:
+        # Python flushes standard output once more as it ends.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
 class working:
-    """A line on a terminal that says what is being done; silent in a pipe and for the first second."""
+    """Words on a terminal about what is being done; silent in a pipe and for the first second."""
 
     def __init__(self, silent: bool) -> None:
         """Show only where somebody looks."""
-        self.shown = not silent and sys.stderr.isatty()
+        self.timer = None if silent or not sys.stderr.isatty() else threading.Timer(1.0, self._start)
+        self.words = "working"
+        self.status: Status | None = None
+
+    def _start(self) -> None:
+        from rich.console import Console
+
+        self.status = Console(stderr=True).status(self.words)
+        self.status.start()
 
     def __enter__(self) -> Callable[[str], None]:
         """Hand out the function that is told."""
-        import time
-
-        began = time.monotonic()
+        if self.timer is not None:
+            self.timer.daemon = True
+            self.timer.start()
 
         def tell(words: str) -> None:
-            if self.shown and time.monotonic() - began > 1.0:
-                click.echo(f"\r\033[K{words} …", nl=False, err=True)
+            self.words = words
+            if self.status is not None:
+                self.status.update(words)
 
         return tell
 
     def __exit__(self, *_: object) -> None:
         """Clear the line."""
-        if self.shown:
-            click.echo("\r\033[K", nl=False, err=True)
+        if self.timer is not None:
+            self.timer.cancel()
+            self.timer.join()
+        if self.status is not None:
+            self.status.stop()

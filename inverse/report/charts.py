@@ -17,7 +17,16 @@ WIDTH, LEFT, RIGHT = 640, 130, 20
 SHAPE_WIDTH, SHAPE_LEFT, SHAPE_RIGHT = 340, 96, 52
 
 MOST_SHAPES = 8
-"""Mode shapes drawn; the rest is in the table."""
+"""Mode shapes drawn; the rest is in result.json."""
+
+MOST_BARS = 24
+"""Components of one mode drawn as bars."""
+
+MOST_SKETCHED = 8
+"""Bodies up to which a mode is also sketched."""
+
+SKETCH_HEIGHT, BODY_RADIUS, REACH, TURN = 64.0, 7.0, 15.0, 50.0
+"""Of the sketch: its height, and how far a component of one moves [user units] and turns [degrees]."""
 
 
 @dataclass(slots=True)
@@ -114,18 +123,41 @@ def _shape(mode: Mode, components: Mapping[str, tuple[str, ...]]) -> str:
         for body, u in mode.shape.items()
         for axis, v in zip(components[body], u, strict=True)
     ]
-    bars = bars[:24]
-    drawing = Drawing(f"Mode {mode.number} at {shown(mode.frequency_hz, 'Hz')}", SHAPE_WIDTH, 12 + 18.0 * len(bars))
+    bars = bars[:MOST_BARS]
+    top = SKETCH_HEIGHT if len(mode.shape) <= MOST_SKETCHED else 0.0
+    name = f"Mode {mode.number} at {shown(mode.frequency_hz, 'Hz')}"
+    drawing = Drawing(name, SHAPE_WIDTH, top + 12 + 18.0 * len(bars))
+    if top:
+        _sketch(drawing, mode, components)
     middle = (SHAPE_LEFT + SHAPE_WIDTH - SHAPE_RIGHT) / 2
     reach = (SHAPE_WIDTH - SHAPE_LEFT - SHAPE_RIGHT) / 2
-    drawing.add("line", x1=middle, y1=2, x2=middle, y2=drawing.height - 2, class_="axis")
+    drawing.add("line", x1=middle, y1=top + 2, x2=middle, y2=drawing.height - 2, class_="axis")
     for i, (label, value) in enumerate(bars):
-        y, size = 6 + 18.0 * i, abs(value) * reach
+        y, size = top + 6 + 18.0 * i, abs(value) * reach
         drawing.add("rect", x=middle if value >= 0 else middle - size, y=y, width=max(size, 0.5), height=12,
                     class_="forward" if value >= 0 else "backward")  # fmt: skip
         drawing.add("text", _short(label, 14), x=4, y=y + 10, class_="label")
         drawing.add("text", f"{value:+.3f}", x=SHAPE_WIDTH - 4, y=y + 10, class_="value")
     return drawing.svg()
+
+
+def _sketch(drawing: Drawing, mode: Mode, components: Mapping[str, tuple[str, ...]]) -> None:
+    """The bodies side by side in the order of the study, at rest (outline) and displaced (filled).
+
+    x goes right and z up; a hand shows the turn, clockwise positive, as a rotation about y is seen along y.
+    """
+    pitch, y = SHAPE_WIDTH / len(mode.shape), SKETCH_HEIGHT / 2
+    for i, (body, u) in enumerate(mode.shape.items()):
+        moved = dict(zip(components[body], u, strict=True))
+        rest = pitch * (i + 0.5)
+        x_to, y_to = rest + REACH * moved.get("x", 0.0), y - REACH * moved.get("z", 0.0)
+        drawing.add("circle", cx=rest, cy=y, r=BODY_RADIUS, class_="rest")
+        drawing.add("circle", cx=x_to, cy=y_to, r=BODY_RADIUS, class_="moved")
+        for axis in ("ry", "r"):
+            if axis in moved:
+                angle = math.radians(TURN * moved[axis])
+                tip = (x_to + 2 * BODY_RADIUS * math.sin(angle), y_to - 2 * BODY_RADIUS * math.cos(angle))
+                drawing.add("line", x1=x_to, y1=y_to, x2=tip[0], y2=tip[1], class_="mode")
 
 
 def _short(text: str, width: int = 20) -> str:

@@ -8,11 +8,14 @@ from pathlib import Path
 from jinja2 import Environment, Template
 from markupsafe import Markup
 
-from inverse.report.charts import frequency_chart, shape_charts
+from inverse.report.charts import MOST_BARS, MOST_SHAPES, frequency_chart, shape_charts
 from inverse.report.tables import asked, shown
 from inverse.study.result import Result, Status
 
 MOST_MODES = 40
+
+MOST_COMPONENTS = 200
+"""Components in the table of mode shapes."""
 
 ANSWERS = {
     Status.MET: "Every objective is met.",
@@ -76,6 +79,11 @@ def render_page(result: Result, study_text: str) -> str:
             }
             for name in result.variables
         ],
+        achieved=[
+            {"name": rows[0].label, "cells": [shown(row.achieved, row.unit) for row in rows]}
+            for rows in zip(*(one.objectives for one in (design, *result.alternatives)), strict=True)
+            if result.alternatives
+        ],
         dimensions=[(name, shown(value, design.dimension_units[name])) for name, value in result.dimensions.items()],
         objectives=[
             {
@@ -106,11 +114,25 @@ def render_page(result: Result, study_text: str) -> str:
             ({"number": mode.number, "frequency": shown(mode.frequency_hz, "Hz")}, Markup(chart))
             for mode, chart in shape_charts(design.modes, design.components)
         ],
+        shape_heads=[mode.number for mode in design.modes[:MOST_SHAPES]],
+        shape_rows=_shape_rows(result)[:MOST_COMPONENTS],
+        most_bars=MOST_BARS,
         versions=", ".join(f"{name} {version}" for name, version in result.versions.items()),
         literature=LITERATURE.get(result.route, ()),
         cautions=_cautions(result),
         study_text=study_text,
     )
+
+
+def _shape_rows(result: Result) -> list[tuple[str, list[str]]]:
+    """The numbers of the shapes drawn: a row for every component, a column for every mode."""
+    modes = result.design.modes[:MOST_SHAPES]
+    return [
+        (body if len(axes) == 1 else f"{body} {axis}", [f"{mode.shape[body][i]:+.4f}" for mode in modes])
+        for body, axes in result.design.components.items()
+        for i, axis in enumerate(axes)
+        if all(body in mode.shape for mode in modes)
+    ]
 
 
 def _cautions(result: Result) -> list[str]:

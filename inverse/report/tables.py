@@ -1,7 +1,9 @@
-"""A result as plain text, at most 80 columns wide, aligned, the same on a terminal and in a pipe."""
+"""A result as plain text, at most 80 columns wide, aligned; `print_summary` adds colour where a terminal shows it."""
 
 from __future__ import annotations
 
+import re
+import textwrap
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -13,22 +15,34 @@ BAR = 15
 
 MOST_MODES = 12
 
+MOST_PARTS = 20
+
+WIDTH = 80
+
+NARROWEST = 8
+"""Columns are not wrapped below this width."""
+
+LONGEST = 60
+"""Names are cut in the middle beyond this length."""
+
 MOST_SENTENCES = 12
 
 
 def summary(result: Result) -> str:
     """The first things a reader wants: the answer, what was asked, the parts to order, and why if not."""
-    blocks = [f"{result.status.upper()}: {result.message}"]
-    blocks += [f"note: {warning}" for warning in result.warnings]
+    blocks = [wrapped(f"{result.status.upper()}: {result.message}")]
+    blocks += [wrapped(f"note: {warning}") for warning in result.warnings]
     if result.objectives:
         blocks.append(objectives_table(result.objectives))
     if result.variables:
         blocks.append(variables_table(result))
+    if result.command == "size":
+        blocks.append(parts_table(result.design))
     if result.tolerance is not None:
         blocks.append(worst_table(result.tolerance["worst_case"]))
         if told := [row["sentence"] for row in result.tolerance["sensitivities"]]:
-            blocks.append("\n".join(told[:MOST_SENTENCES]))
-        blocks += [f"note: {remark}" for remark in result.tolerance.get("remarks", ())]
+            blocks.append("\n".join(wrapped(line) for line in told[:MOST_SENTENCES]))
+        blocks += [wrapped(f"note: {remark}") for remark in result.tolerance.get("remarks", ())]
         if recentred := result.tolerance.get("recentred"):
             blocks.append(recentred_table(result, recentred))
     if result.command == "modes" or not result.objectives:
@@ -48,10 +62,11 @@ def shown(value: float | None, unit: str) -> str:
 
 def objectives_table(rows: Sequence[ObjectiveRow]) -> str:
     """One line per objective."""
-    table = [("objective", "asked", "achieved", "", "")]
+    table = [("objective", "asked", "achieved", "margin", "", "")]
     for row in rows:
         verdict = {True: "met", False: "missed", None: ""}[row.met]
-        table.append((row.label, asked(row), shown(row.achieved, row.unit), window_bar(row), verdict))
+        margin = shown(row.margin, row.unit) if row.met is not None else ""
+        table.append((row.label, asked(row), shown(row.achieved, row.unit), margin, window_bar(row), verdict))
     return aligned(table)
 
 
@@ -82,14 +97,29 @@ def window_bar(row: ObjectiveRow) -> str:
 
 
 def variables_table(result: Result) -> str:
-    """The variables, those of other designs beside them."""
-    head = ("variable", "value", *(f"design {i}" for i in range(2, 2 + len(result.alternatives))))
-    table = [head[: 2 + min(len(result.alternatives), 3)]]
-    for name, value in result.variables.items():
-        unit = result.design.variable_units[name]
-        others = [shown(design.variables[name], unit) for design in result.alternatives[:3]]
-        table.append((name, shown(value, unit), *others))
-    return aligned(table)
+    """The variables, and beside them those of other designs with what these achieve."""
+    others = result.alternatives[:3]
+    designs = (result.design, *others)
+    table = [("variable", "value", *(f"design {i}" for i in range(2, 2 + len(others))))]
+    for name, unit in result.design.variable_units.items():
+        table.append((name, *(shown(design.variables[name], unit) for design in designs)))
+    if others:
+        for rows in zip(*(design.objectives for design in designs), strict=True):
+            table.append((rows[0].label, *(shown(row.achieved, row.unit) for row in rows)))
+    more = len(result.alternatives) - len(others)
+    return aligned(table) + (f"\n… and {more} more designs in report.html" if more > 0 else "")
+
+
+def parts_table(design: Design) -> str:
+    """One line per part with its dimensions; a name without a dot, such as `gravity`, is no part."""
+    parts: dict[str, list[str]] = {}
+    for name, value in design.dimensions.items():
+        part, _, dimension = name.partition(".")
+        if dimension:
+            parts.setdefault(part, []).append(f"{dimension} {shown(value, design.dimension_units[name])}")
+    rows = [(part, ", ".join(dimensions)) for part, dimensions in list(parts.items())[:MOST_PARTS]]
+    more = len(parts) - len(rows)
+    return aligned([("part", "dimensions"), *rows]) + (f"\n… and {more} more in parts.csv" if more > 0 else "")
 
 
 def worst_table(rows: Sequence[Mapping[str, Any]]) -> str:
@@ -123,12 +153,50 @@ def modes_table(design: Design) -> str:
 
 
 def aligned(table: Sequence[Sequence[str]]) -> str:
-    """Columns padded to the widest entry, long names cut in the middle."""
-    cut = [[_short(cell, 40 if i == len(row) - 1 else 34) for i, cell in enumerate(row)] for row in table]
-    widths = [max(len(row[i]) for row in cut if i < len(row)) for i in range(max(map(len, cut)))]
-    return "\n".join("  ".join(cell.ljust(w) for cell, w in zip(row, widths, strict=False)).rstrip() for row in cut)
+    """Columns padded to their widest entry; where that is too wide for the line, the widest columns are wrapped."""
+    columns = max(map(len, table))
+    cells = [[*map(_cell, row), *[""] * (columns - len(row))] for row in table]
+    widths = [max(1, *map(len, column)) for column in zip(*cells, strict=True)]
+    while sum(widths) + 2 * (columns - 1) > WIDTH and max(widths) > NARROWEST:
+        widths[widths.index(max(widths))] -= 1
+    lines = []
+    for row in cells:
+        wrapped_cells = [textwrap.wrap(cell, width) or [""] for cell, width in zip(row, widths, strict=True)]
+        for i in range(max(map(len, wrapped_cells))):
+            line = [(cell[i] if i < len(cell) else "").ljust(w) for cell, w in zip(wrapped_cells, widths, strict=True)]
+            lines.append("  ".join(line).rstrip())
+    return "\n".join(lines).replace("\N{NO-BREAK SPACE}", " ")
 
 
-def _short(text: str, width: int = 34) -> str:
-    clean = "".join(c if c.isprintable() else "�" for c in text)
+def wrapped(text: str) -> str:
+    """A sentence over as many lines as it needs."""
+    return "\n".join(textwrap.wrap(_printable(text), WIDTH, subsequent_indent="  ", break_on_hyphens=False))
+
+
+def print_summary(result: Result) -> None:
+    """Print the summary, in colour if standard output is a terminal."""
+    from rich.console import Console
+    from rich.text import Text
+
+    text = Text(summary(result))
+    text.highlight_regex(r"(?m)^MET:|(?<=  )met$", "bold green")
+    text.highlight_regex(r"(?m)^(NOT MET|IMPOSSIBLE):|(?<=  )missed$", "bold red")
+    Console(highlight=False, soft_wrap=True).print(text)
+
+
+def _cell(text: str) -> str:
+    """A number and its unit stay on one line."""
+    return re.sub(
+        r"(?<=[\d±]) (?=\S)",
+        "\N{NO-BREAK SPACE}",
+        _short(text, LONGEST) if len(text) > 2 * LONGEST else _printable(text),
+    )
+
+
+def _printable(text: str) -> str:
+    return "".join(c if c.isprintable() else "�" for c in text)
+
+
+def _short(text: str, width: int) -> str:
+    clean = _printable(text)
     return clean if len(clean) <= width else f"{clean[: width // 2 - 1]}…{clean[-(width // 2) :]}"

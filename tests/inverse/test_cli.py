@@ -1,6 +1,9 @@
 """The command line: exit status, what goes where, and nothing half written."""
 
 import json
+import os
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -41,7 +44,7 @@ def test_met_is_zero_and_leaves_its_files(run, tmp_path):
 def test_not_met_is_one_and_says_what_would_do(run, tmp_path):
     done = run("size", impossible(tmp_path))
     assert done.exit_code == 1
-    assert "open the range of `arm` down to" in done.output
+    assert "open the range of `arm` down to" in " ".join(done.output.split())
 
 
 def test_faults_of_the_file_are_two_with_one_line_and_no_folder(run, tmp_path):
@@ -66,6 +69,40 @@ def test_json_prints_the_record_and_nothing_else(run, tmp_path):
     done = run("size", STUDIES / "lantern_pair.toml", "--json")
     assert done.output == (tmp_path / "out/lantern_pair/result.json").read_text(encoding="utf-8")
     json.loads(done.output)
+
+
+def test_output_fits_eighty_columns_and_lists_the_parts(run):
+    for name in ("pump_train", "bench", "cart"):
+        output = run("size", STUDIES / f"{name}.toml").output
+        assert max(map(len, output.splitlines())) <= 80
+        assert "part " in output
+    assert "\x1b" not in output, "no colour in a pipe"
+
+
+@pytest.mark.parametrize("encoding", ["ascii", "cp1252"])
+def test_a_pipe_of_another_encoding_costs_no_run(tmp_path, encoding):
+    done = subprocess.run(
+        [sys.executable, "-m", "inverse", "size", STUDIES / "lantern_pair.toml", "--out", tmp_path],
+        env=os.environ | {"PYTHONIOENCODING": encoding},
+        capture_output=True,
+        check=False,
+    )
+    assert (done.returncode, done.stderr) == (0, b"")
+
+
+def test_a_reader_that_leaves_early_is_no_fault(tmp_path):
+    # The read end is closed before anything is written, so that the first print finds no reader.
+    reader, writer = os.pipe()
+    os.close(reader)
+    with os.fdopen(writer, "wb") as closed:
+        done = subprocess.run(
+            [sys.executable, "-m", "inverse", "size", STUDIES / "lantern_pair.toml", "--out", tmp_path],
+            stdout=closed,
+            stderr=subprocess.PIPE,
+            check=False,
+        )
+    assert (done.returncode, done.stderr) == (0, b"")
+    assert (tmp_path / "report.html").exists()
 
 
 def test_quiet_prints_nothing(run):

@@ -1,5 +1,6 @@
 """The page and the tables: the numbers are there, and hostile names are only text."""
 
+import re
 from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
@@ -7,10 +8,10 @@ from pathlib import Path
 import pytest
 
 from inverse import load_study
-from inverse.report.charts import frequency_chart
+from inverse.report.charts import frequency_chart, shape_charts
 from inverse.report.page import render_page
-from inverse.report.tables import objectives_table, window_bar
-from inverse.study.result import ObjectiveRow
+from inverse.report.tables import aligned, objectives_table, summary, window_bar, wrapped
+from inverse.study.result import Certificate, Mode, ObjectiveRow
 
 STUDIES = Path(__file__).parents[3] / "studies"
 VOID = {"meta", "line", "rect", "br"}
@@ -79,7 +80,10 @@ def test_hostile_names_are_text(name):
     parsed = read(render_page(hostile, name))
     assert "script" not in parsed.tags
     assert name in "".join(parsed.text)
-    assert max(map(len, objectives_table(hostile.objectives).splitlines())) < 100
+    assert max(map(len, objectives_table(hostile.objectives).splitlines())) <= 80
+    told = summary(hostile)
+    assert max(map(len, told.splitlines())) <= 80
+    assert all(c.isprintable() or c == "\n" for c in told)
 
 
 def row(achieved: float) -> ObjectiveRow:
@@ -98,6 +102,51 @@ def test_bar_shows_the_value_in_its_window():
     assert window_bar(row(10.0)) == "···[···●···]···"
     assert window_bar(row(2.0)).startswith("‹")
     assert window_bar(row(20.0)).endswith("›")
+
+
+def test_wide_tables_wrap_and_keep_every_word():
+    cells = [
+        ("objective", "asked", "", "achieved"),
+        ("a long name " * 5, "none in 21.3 Hz to 21.5 Hz " * 3, "", "42.6 Hz"),
+    ]
+    lines = aligned(cells).splitlines()
+    assert max(map(len, lines)) <= 80
+    assert not any(line.rstrip().endswith(("21.3", "21.5", "42.6")) for line in lines), "a number without its unit"
+    assert sorted(" ".join(lines).split()) == sorted(" ".join(" ".join(row) for row in cells).split())
+
+
+def test_control_characters_do_not_reach_the_terminal():
+    """ECMA-48: sequences that begin with ESC steer a terminal."""
+    assert wrapped("lamp\x1b[2J") == "lamp�[2J"
+
+
+def test_drawings_do_not_leave_their_picture():
+    """A component of one in every direction, the largest a shape has."""
+    axes = ("x", "z", "ry")
+    shape = {"left": (1.0, 1.0, 1.0), "right": (-1.0, -1.0, -1.0)}
+    mode = Mode(number=1, frequency_hz=2.0, damping_ratio=None, shape=shape)
+    ((_, chart),) = shape_charts((mode,), {"left": axes, "right": axes})
+    height = float(re.search(r'viewBox="0 0 340 ([\d.]+)"', chart)[1])
+    for x, y in re.findall(r'c?x2?="([\d.-]+)" c?y2?="([\d.-]+)"', chart):
+        assert 0 <= float(x) <= 340
+        assert 0 <= float(y) <= height
+    assert chart.count('class="moved"') == 2
+
+
+def test_numbers_of_the_shapes_are_a_table_too():
+    study = load_study(STUDIES / "cart.toml")
+    result = study.size()
+    text = read(render_page(result, study.text)).text
+    for mode in result.modes[:8]:
+        for u in mode.shape.values():
+            assert all(f"{v:+.4f}" in text for v in u)
+
+
+def test_a_proof_is_shown():
+    study = load_study(STUDIES / "lantern_pair.toml")
+    proof = Certificate(claim="0.6 Hz is out of reach", rule="enclosure", gap=0.14, reason="the arms are too long")
+    text = " ".join(read(render_page(replace(study.size(), certificate=proof), "")).text)
+    assert "0.6 Hz is out of reach (enclosure, gap 0.14). the arms are too long" in text
 
 
 def test_chart_of_frequencies_names_bands_and_windows():
