@@ -204,7 +204,7 @@ class Kind(Enum):
     MASS = "kg", "a mass", '"6.5 kg"', "kg, g, mg"
     RATE = "N/m", "a rate", '"7.4 N/m"', "GN/m, MN/m, kN/m, N/m, mN/m"
     TORSIONAL_RATE = "N m/rad", "a torsional rate", '"350 N m/rad"', "kN m/rad, N m/rad, mN m/rad"
-    FREQUENCY = "Hz", "a frequency", '"0.36 Hz"', "MHz, kHz, Hz, mHz"
+    FREQUENCY = "Hz", "a frequency", '"0.36 Hz"', "MHz, kHz, Hz, mHz, µHz"
     TIME = "s", "a time", '"20 s"', "s, ms, µs"
     ANGLE = "rad", "an angle", '"5 deg"', "rad, mrad, µrad"
     FORCE = "N", "a force", '"3 N"', "MN, kN, N, mN"
