@@ -114,6 +114,20 @@ def modes(study: Path, design: Path | None, out: Path | None, seed: int | None, 
 
 @main.command()
 @STUDY
+@common
+@guarded
+def reach(study: Path, out: Path | None, seed: int | None, as_json: bool, quiet: bool) -> int:
+    """Bound what each objective of STUDY can attain within the ranges, and prove it where they cannot all be met."""
+    from inverse import load_study
+
+    loaded = load_study(study)
+    with working(quiet or as_json) as progress:
+        result = loaded.reach(seed=seed, progress=progress)
+    return delivered(result, loaded.text, out, as_json, quiet)
+
+
+@main.command()
+@STUDY
 @click.option(
     "--design",
     type=click.Path(file_okay=False, path_type=Path),

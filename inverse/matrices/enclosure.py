@@ -227,7 +227,9 @@ class Rest:
         equations, slopes = (_Sum.of(found, len(self.names)) for found in (self.equations, self.slopes))
         Y, solved = _inverses(slopes.at(signs, np.hstack([centre, y])))
         G, least = (part[:, :, 0] for part in equations.times(Y, signs, np.hstack([low, y]), np.hstack([high, y])))
-        first, last = -G - 2 * least, -G + 2 * least
+        # Whatever does not change at all still needs a box with an inside.
+        least_room = KRAWCZYK_ROUNDING * (np.abs(y) + 0.01 * np.abs(y).max(axis=1, keepdims=True))
+        first, last = -G - 2 * least - least_room, -G + 2 * least + least_room
         proved, going = np.zeros(len(low), bool), np.asarray(sound & solved)
         for _ in range(GROWTHS):
             bounds = [np.where(self.positive, np.maximum(y + d, y / 2), y + d) for d in (first, last)]
@@ -237,7 +239,7 @@ class Rest:
             radius = (least + (shrunk @ reach)[:, :, 0]) * (1 + KRAWCZYK_ROUNDING)
             inside = (y - G - radius > bounds[0]) & (y - G + radius < bounds[1])
             new = inside.all(axis=1) & going
-            grown = np.where(new, 1.0, GROWN)[:, None] * radius
+            grown = np.where(new[:, None], radius, GROWN * radius + least_room)
             first, last = (np.where(going[:, None], -G + side * grown, d) for side, d in ((-1, first), (1, last)))
             proved |= new
             going = going & ~new & (radius < LOST * (1 + np.abs(y))).all(axis=1)

@@ -95,6 +95,15 @@ def render_page(result: Result, study_text: str) -> str:
             }
             for row in result.objectives
         ],
+        reach=[
+            {
+                "label": row["label"],
+                "cells": [
+                    shown(row[end], row["unit"]) for end in ("certain_low", "found_low", "found_high", "certain_high")
+                ],
+            }
+            for row in result.reach or ()
+        ],
         worst=[
             {"label": row["label"], "low": shown(row["low"], row["unit"]), "high": shown(row["high"], row["unit"])}
             for row in (result.tolerance or {}).get("worst_case", ())

@@ -38,6 +38,8 @@ def summary(result: Result) -> str:
         blocks.append(variables_table(result))
     if result.command == "size":
         blocks.append(parts_table(result.design))
+    if result.reach:
+        blocks.append(reach_table(result.reach))
     if result.tolerance is not None:
         blocks.append(worst_table(result.tolerance["worst_case"]))
         if told := [row["sentence"] for row in result.tolerance["sensitivities"]]:
@@ -120,6 +122,14 @@ def parts_table(design: Design) -> str:
     rows = [(part, ", ".join(dimensions)) for part, dimensions in list(parts.items())[:MOST_PARTS]]
     more = len(parts) - len(rows)
     return aligned([("part", "dimensions"), *rows]) + (f"\n… and {more} more in parts.csv" if more > 0 else "")
+
+
+def reach_table(rows: Sequence[Mapping[str, Any]]) -> str:
+    """What each objective can be: found at designs, and certainly not beyond."""
+    table = [("within the ranges", "never below", "found from", "found to", "never above")]
+    ends = ("certain_low", "found_low", "found_high", "certain_high")
+    table += [(row["label"], *(shown(row[end], row["unit"]) for end in ends)) for row in rows]
+    return aligned(table)
 
 
 def worst_table(rows: Sequence[Mapping[str, Any]]) -> str:

@@ -12,10 +12,11 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
+from inverse.design.bounds import Certificate
 from inverse.design.shortfall import Shortfall
 from inverse.design.verification import Verification
 from inverse.errors import StudyError
-from inverse.study.result import Certificate, Design, Mode, ObjectiveRow, Result, Status
+from inverse.study.result import Design, Mode, ObjectiveRow, Result, Status
 
 RECORD = "result.json"
 PARTS = "parts.csv"

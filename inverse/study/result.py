@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Self
 
+from inverse.design.bounds import Certificate
 from inverse.design.shortfall import Shortfall
 from inverse.design.verification import Verification
 from inverse.errors import DesignError
@@ -72,16 +73,6 @@ class Design:
     def met(self) -> bool:
         """Whether every objective that can be met is."""
         return all(row.met is not False for row in self.objectives)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Certificate:
-    """A claim with its proof: the rule used, the gap left, and the reason in words."""
-
-    claim: str
-    rule: str
-    gap: Number
-    reason: str
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import platform
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import Any
@@ -17,6 +17,7 @@ from inverse.assembly.assembly import Assembly, Model
 from inverse.assembly.parameters import Variable
 from inverse.assembly.statics import Deflection
 from inverse.assembly.terms import Array
+from inverse.design.bounds import Budget, Certificate, Range, prove_impossible, reachable_range
 from inverse.design.gradient import Outcome, solve_by_gradient
 from inverse.design.problem import Problem
 from inverse.design.shortfall import Shortfall, explain
@@ -32,6 +33,12 @@ from inverse.tolerance.yields import measure_yield
 from objectives.base import Objective
 
 VERSION = "0.1.0"
+
+RANGE_BOXES = 2000
+"""Boxes looked at for each end of an objective's range."""
+
+PROOF_BOXES = 5000
+"""Boxes looked at for a proof that the objectives cannot be met."""
 
 Progress = Callable[[str], None]
 """Called with a few words about what is being done."""
@@ -121,6 +128,54 @@ class Study:
         message = _verdict(record) if self.objectives else "modes of the design as it stands"
         return self._result("modes", status, message, record, evaluation, began, seed, route="evaluation")
 
+    def reach(self, *, seed: int | None = None, progress: Progress = lambda _: None) -> Result:
+        """What each objective can attain within the ranges, with bounds, and whether all can be met together.
+
+        Impossible with a certificate, met where a design was found, not met where neither is known.
+        """
+        began = time.perf_counter()
+        problem = Problem(Evaluator(self.model, self.objectives))
+        rows = []
+        for i, objective in enumerate(self.objectives if len(problem.free) else ()):
+            progress(f"bounding {objective.label}")
+            rows.append(reachable_range(problem, i, budget=Budget(boxes=RANGE_BOXES)))
+        progress("looking for a design or a proof that there is none")
+        certificate, t, words = self._decided(problem, seed, progress)
+        evaluation = evaluated(problem.evaluator, problem.designs(t)[0])
+        record = describe(evaluation)
+        status = Status.MET if record.met else Status.NOT_MET
+        unbounded = [f"{row.unbounded_because}" for row in rows if row.unbounded_because]
+        result = self._result(
+            "reach",
+            Status.IMPOSSIBLE if certificate else status,
+            words,
+            record,
+            evaluation,
+            began,
+            seed,
+            route="bounds",
+            certificate=certificate,
+            reach=tuple(_reach_row(row) for row in rows),
+        )
+        return replace(result, warnings=(*result.warnings, *unbounded))
+
+    def _decided(self, problem: Problem, seed: int | None, progress: Progress) -> tuple[Certificate | None, Array, str]:
+        """A certificate, or a point that meets everything or comes closest, with what is known in words."""
+        if not len(problem.free):
+            return None, np.empty(0), "there is nothing to choose"
+        verdict = prove_impossible(problem, Budget(boxes=PROOF_BOXES))
+        if verdict.certificate is not None and verdict.closest is not None:
+            return verdict.certificate, problem.points(verdict.closest[None])[0], verdict.certificate.reason
+        if verdict.met_at is not None and problem.all_met(problem.evaluator.at(verdict.met_at).values())[0]:
+            return verdict.certificate, problem.points(verdict.met_at[None])[0], "reachable: a design was found"
+        outcome = solve_by_gradient(
+            problem, seed=self._seed(seed), starts=self.solve.starts, alternatives=0, progress=progress
+        )
+        if verdict.certificate is not None:
+            return verdict.certificate, outcome.closest, verdict.certificate.reason
+        known = "reachable: a design was found" if len(outcome.designs) else verdict.message.rstrip(".").lower()
+        return None, outcome.closest, known
+
     def tolerance(self, design: Mapping[str, float] | None = None, *, seed: int | None = None) -> Result:
         """What the tolerances do to the design as it stands, or to given values of the variables.
 
@@ -190,17 +245,23 @@ class Study:
         if not len(problem.free):
             self._refuse_unstable(evaluation)
         record = describe(evaluation)
-        verification, shortfall = None, None
+        verification, shortfall, certificate = None, None, None
         if evaluation.state.modes.stable[0]:
             progress("checking by a second path")
             verification = verify(evaluation)
             if not record.met and len(problem.free):
                 progress("looking for what would help")
                 shortfall = explain(problem, outcome.closest, self._seed(seed))
+                progress("looking for a proof that it cannot be done")
+                certificate = prove_impossible(problem, Budget(boxes=PROOF_BOXES)).certificate
         confirmed = verification is not None and verification.agrees
         status = Status.MET if record.met and confirmed else Status.NOT_MET
+        if certificate is not None:
+            status = Status.IMPOSSIBLE
         others = [describe(evaluated(problem.evaluator, problem.designs(t)[0])) for t in outcome.designs[1:]]
         words = _message(record, shortfall, verification, outcome)
+        if certificate is not None:
+            words = f"{certificate.reason}; {words}"
         if shop is not None:
             ranked = ", the best of the designs found" if len(outcome.designs) > 1 else ""
             words = f"{words}; {_yield_words(shop)}{ranked}"
@@ -216,6 +277,7 @@ class Study:
             alternatives=tuple(others),
             shortfall=shortfall,
             verification=verification,
+            certificate=certificate,
             tolerance=shop,
         )
 
@@ -299,6 +361,17 @@ class Study:
             },
             **rest,
         )
+
+
+def _reach_row(row: Range) -> dict[str, Any]:
+    return {
+        "label": row.label,
+        "unit": row.unit,
+        "found_low": row.found_low,
+        "found_high": row.found_high,
+        "certain_low": row.certain_low if np.isfinite(row.certain_low) else None,
+        "certain_high": row.certain_high if np.isfinite(row.certain_high) else None,
+    }
 
 
 def _yield_words(shop: Mapping[str, Any]) -> str:

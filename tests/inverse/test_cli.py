@@ -47,6 +47,32 @@ def test_not_met_is_one_and_says_what_would_do(run, tmp_path):
     assert "open the range of `arm` down to" in " ".join(done.output.split())
 
 
+def test_impossible_is_said_with_its_proof(run, tmp_path):
+    """Arms of 1.2 m and more swing at 0.4575 Hz at most: g/L with the rod's share, by hand 0.45747 Hz."""
+    done = run("size", impossible(tmp_path))
+    record = load_result("out/too_fast")
+    assert done.exit_code == 1
+    assert record.status == "impossible"
+    assert "`frequency 1`" in record.certificate.claim
+    assert abs(record.certificate.gap - (0.6 - 0.003 - 0.45747)) < 1e-4
+
+
+def test_reach_brackets_what_can_be_attained(run):
+    assert run("reach", STUDIES / "lantern_pair.toml", "--out", "bounds").exit_code == 0
+    result = load_result("bounds")
+    assert result.status == "met"
+    for row in result.reach:
+        assert row["certain_low"] <= row["found_low"] <= row["found_high"] <= row["certain_high"]
+    frequency = result.reach[0]
+    assert frequency["found_high"] == pytest.approx(0.45747, abs=1e-4)
+    assert frequency["certain_high"] == pytest.approx(frequency["found_high"], rel=1e-6)
+
+
+def test_reach_proves_the_impossible(run, tmp_path):
+    assert run("reach", impossible(tmp_path), "--out", "bounds").exit_code == 1
+    assert load_result("bounds").status == "impossible"
+
+
 def test_faults_of_the_file_are_two_with_one_line_and_no_folder(run, tmp_path):
     (tmp_path / "bad.toml").write_text("title = 3", encoding="utf-8")
     done = run("size", "bad.toml")
