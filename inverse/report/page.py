@@ -105,7 +105,10 @@ def render_page(result: Result, study_text: str) -> str:
             for row in result.reach or ()
         ],
         worst=[
-            {"label": row["label"], "low": shown(row["low"], row["unit"]), "high": shown(row["high"], row["unit"])}
+            {
+                "label": row["label"],
+                "cells": [shown(row[end], row["unit"]) for end in ("certain_low", "low", "high", "certain_high")],
+            }
             for row in (result.tolerance or {}).get("worst_case", ())
         ],
         frequency_chart=Markup(frequency_chart(design.modes, result.objectives)),

@@ -133,9 +133,10 @@ def reach_table(rows: Sequence[Mapping[str, Any]]) -> str:
 
 
 def worst_table(rows: Sequence[Mapping[str, Any]]) -> str:
-    """The farthest builds found within the tolerances."""
-    table = [("worst builds found", "lowest", "highest")]
-    table += [(row["label"], shown(row["low"], row["unit"]), shown(row["high"], row["unit"])) for row in rows]
+    """The farthest builds found within the tolerances, and what none exceeds where that is known."""
+    table = [("worst builds", "never below", "lowest found", "highest found", "never above")]
+    ends = ("certain_low", "low", "high", "certain_high")
+    table += [(row["label"], *(shown(row[end], row["unit"]) for end in ends)) for row in rows]
     return aligned(table)
 
 

@@ -17,11 +17,15 @@ from inverse.study.content import Tolerance as Stated
 from inverse.tolerance.classes import class_limit
 from inverse.tolerance.contributions import contributions
 from inverse.tolerance.distributions import Errors, Limit, Tolerance
+from inverse.tolerance.guaranteed import certain_ends
 from inverse.tolerance.recentring import recentre
 from inverse.tolerance.sensitivities import sensitivities, sentence, shown_values
 from inverse.tolerance.worst_case import extremes
 from inverse.tolerance.yields import measure_yield
 from inverse.units import Window
+
+ATTAINED = 1e-6
+"""Relative gap at which a bound counts as attained by the build that was found."""
 
 
 def errors_of(stated: Sequence[Stated], model: Model, base: Array) -> Errors:
@@ -129,7 +133,7 @@ def recentring_record(problem: Problem, x: Array, stated: Sequence[Stated], *, s
 
 
 def _worst_case(evaluator: Evaluator, x: Array, errors: Errors, base: Array, seed: int) -> list[dict[str, Any]]:
-    """The extremes found, with the builds they were found at; nothing is claimed beyond that."""
+    """The extremes found, with the builds they were found at, and what no build exceeds where that is known."""
     touched = sorted(set(errors.dimension.tolist()))
     dimensions = evaluator.model.parameters.dimensions
     slopes = errors.slopes(base)
@@ -146,12 +150,21 @@ def _worst_case(evaluator: Evaluator, x: Array, errors: Errors, base: Array, see
             "high": found.high,
             "low_at": build(found.low_at),
             "high_at": build(found.high_at),
-            "exact": False,
-            "certain_low": None,
-            "certain_high": None,
+            "exact": _agree(found.low, ends[0]) and _agree(found.high, ends[1]),
+            "certain_low": ends[0],
+            "certain_high": ends[1],
         }
-        for objective, found in zip(evaluator.objectives, extremes(evaluator, x, errors, seed=seed), strict=True)
+        for objective, found, ends in zip(
+            evaluator.objectives,
+            extremes(evaluator, x, errors, seed=seed),
+            certain_ends(evaluator, x, errors),
+            strict=True,
+        )
     ]
+
+
+def _agree(found: float | None, certain: float | None) -> bool:
+    return found is not None and certain is not None and abs(found - certain) <= ATTAINED * abs(found)
 
 
 def _sensitivities(evaluator: Evaluator, x: Array, errors: Errors) -> list[dict[str, Any]]:
