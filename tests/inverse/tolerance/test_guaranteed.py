@@ -35,7 +35,7 @@ def sampled(evaluator: Evaluator, errors: Errors, rng: np.random.Generator) -> n
 @pytest.mark.parametrize("seed", range(20))
 @pytest.mark.parametrize("kind", ["chain", "pair"])
 def test_no_build_lies_outside_and_little_lies_between(kind, seed):
-    """Exhaustive corners and dense samples, 40 small problems: never violated, single ones tight to a tenth of the range."""
+    """Corners and dense samples of 40 small problems: never violated, single modes tight to a tenth of the range."""
     rng = np.random.default_rng(seed)
     if kind == "chain":
         assembly = chain(list(rng.uniform(1, 2, 3)), list(rng.uniform(50, 200, 3)))
